@@ -1,0 +1,29 @@
+// Runs a piece of the core and hands its exceptions to R as values.
+//
+// R's own error would jump over C++ frames; a value lets every destructor run first. The R
+// function core_result() turns the value into a classed condition.
+#pragma once
+
+#include <RcppEigen.h>
+
+#include <lambdabar/base.hpp>
+
+template <class Body>
+SEXP guarded(const Body& body) {
+  try {
+    return body();
+  } catch (const lambdabar::Error& error) {
+    Rcpp::List facts(error.facts().size());
+    Rcpp::CharacterVector names(error.facts().size());
+    for (std::size_t i = 0; i < error.facts().size(); ++i) {
+      facts[i] = error.facts()[i].second;
+      names[i] = error.facts()[i].first;
+    }
+    facts.names() = names;
+    Rcpp::List out = Rcpp::List::create(Rcpp::_["tag"] = error.tag(),
+                                        Rcpp::_["message"] = std::string(error.what()),
+                                        Rcpp::_["facts"] = facts);
+    out.attr("class") = "lb_core_error";
+    return out;
+  }
+}
