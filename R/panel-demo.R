@@ -13,10 +13,11 @@
 #'
 #' @details
 #' The excess return of firm i in month t is
-#' \deqn{r_{it} = \beta_i'(\lambda + u_t) + \delta'z_{i,t} + a_i + m_t + e_{it}}{
-#'       r_it = beta_i'(lambda + u_t) + delta'z_it + a_i + m_t + e_it}
+#' \deqn{r_{it} = \beta_i'(\lambda + u_t) + (\delta + v_t)'z_{it} + a_i + m_t + e_{it}}{
+#'       r_it = beta_i'(lambda + u_t) + (delta + v_t)'z_it + a_i + m_t + e_it}
 #' with factor surprises u, premia \eqn{\lambda}, characteristics z known before the month
-#' begins, their premia \eqn{\delta}, a firm effect a and a month effect m. Betas do not
+#' begins, their premia \eqn{\delta} with swings v from month to month, a firm effect a and a
+#' month effect m. Betas do not
 #' depend on the characteristics.
 #'
 #' @return A data frame, sorted by firm and month, with about 0.7 `firms` × `months` rows:
@@ -25,7 +26,7 @@
 #'   * `mkt`, `smb`: returns of the two traded factors; `growth`: the surprise in growth, in
 #'     the same units, with autocorrelation 0.5;
 #'   * `size`: log market value; `value`: log of book to market; `turnover`: share of the firm
-#'     traded in the month before; the last two are `NA` in a few percent of the rows;
+#'     traded in the year before; the last two are `NA` in a few percent of the rows;
 #'   * `mcap`: market value, in millions of the invented currency.
 #'
 #'   The attribute `true_premia` has the premium of each factor (a month, for a beta of one)
@@ -78,10 +79,14 @@ invent_market <- function(N, T) {
   smb <- 0.15 * mkt + stats::rnorm(T, 0, 0.030)
   growth <- as.numeric(stats::filter(stats::rnorm(T, 0, 0.02), 0.5, "recursive"))
   month_effect <- stats::rnorm(T, 0, 0.010)
+  # What a characteristic earns differs from month to month around its premium.
+  swing <- cbind(
+    size = stats::rnorm(T, 0, 0.003), value = stats::rnorm(T, 0, 0.010), turnover = stats::rnorm(T, 0, 0.006)
+  )
 
   betas <- cbind(mkt = stats::rnorm(N, 1, 0.45), smb = stats::rnorm(N, 0.5, 0.6), growth = stats::rnorm(N, 0.3, 0.8))
   industry <- sample(invented_industries(), N, replace = TRUE)
-  firm_effect <- stats::rnorm(N, 0, 0.004)
+  firm_effect <- stats::rnorm(N, 0, 0.008)
   level <- cbind(size = stats::rnorm(N, 6, 1.6), value = stats::rnorm(N, -0.4, 0.6), turnover = stats::rnorm(N, 1, 0.5))
   idiosyncratic <- stats::runif(N, 0.05, 0.13)
 
@@ -97,10 +102,12 @@ invent_market <- function(N, T) {
     wander <- function(sd) as.numeric(stats::filter(stats::rnorm(n, 0, sd), 0.95, "recursive"))
     size <- level[i, "size"] + wander(0.10)
     value <- level[i, "value"] + wander(0.08)
-    turnover <- exp(level[i, "turnover"] - 1 + wander(0.12)) / 10
+    turnover <- exp(level[i, "turnover"] - 1 + wander(0.12))
     ret <- as.numeric(cbind(mkt, smb, growth)[t, , drop = FALSE] %*% betas[i, ]) +
       sum(premia[c("mkt", "smb", "growth")] * betas[i, ]) +
-      premia[["size"]] * (size - 6) + premia[["value"]] * (value + 0.4) + premia[["turnover"]] * turnover * 10 +
+      (premia[["size"]] + swing[t, "size"]) * (size - 6) +
+      (premia[["value"]] + swing[t, "value"]) * (value + 0.4) +
+      (premia[["turnover"]] + swing[t, "turnover"]) * turnover +
       firm_effect[i] + month_effect[t] + stats::rnorm(n, 0, idiosyncratic[i])
     ret[stats::runif(n) < 0.01] <- NA
     mcap <- exp(size)
@@ -114,7 +121,7 @@ invent_market <- function(N, T) {
     vctrs::new_data_frame(list(
       firm = rep(names[i], n), month = label[t], industry = rep(industry[i], n), ret = pmax(ret, -0.95),
       mkt = mkt[t] + premia[["mkt"]], smb = smb[t] + premia[["smb"]], growth = growth[t],
-      size = size, value = value, turnover = turnover * 10, mcap = mcap
+      size = size, value = value, turnover = turnover, mcap = mcap
     ))[trading, ]
   })
   market <- do.call(rbind, rows)

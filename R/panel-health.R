@@ -128,7 +128,7 @@ constant_finding <- function(name, health) {
     "constant", name, health$n_periods_constant, health$n_periods_compared,
     if (all) "note" else "look",
     if (all) {
-      "one value a period: a factor for price_factors(), not a term of price_traits()"
+      "one value a period, as a factor has"
     } else {
       "those cross-sections cannot learn from it"
     }
@@ -173,7 +173,7 @@ print.lb_health <- function(x, ...) {
     verdict = x$verdict,
     detail = x$detail
   )
-  cat_lines("Panel health: ", if (looks) paste0(count_of(looks, "finding"), " to look at") else "nothing to look at", "")
+  cat_lines(paste0("Panel health: ", if (looks) count_of(looks, "finding") else "nothing", " to look at"), "")
   print_columns(shown, right = "found", wrap = "detail")
   invisible(x)
 }

@@ -38,14 +38,14 @@ format_figures <- function(x, scale = x, digits = 3L) {
 
 # A plain table: `right` names the right-aligned columns, `wrap` the last column, whose text
 # goes on below itself when the line is full.
-print_columns <- function(table, right = character(), wrap = NULL) {
+print_columns <- function(table, right = character(), wrap = NULL, indent = 2L) {
   names <- names(table)
   cells <- lapply(names, function(name) as.character(table[[name]]))
   width <- mapply(function(cell, name) max(nchar(c(cell, name))), cells, names)
   pad <- function(text, j) formatC(text, width = if (names[j] %in% right) width[j] else -width[j])
   fixed <- which(!names %in% wrap)
   left <- function(values) {
-    paste0("  ", paste(vapply(fixed, function(j) pad(values[j], j), ""), collapse = "  "))
+    paste0(strrep(" ", indent), paste(vapply(fixed, function(j) pad(values[j], j), ""), collapse = "  "))
   }
   emit <- function(values) {
     start <- left(values)

@@ -11,6 +11,112 @@ Rcpp::Rostream<true>&  Rcpp::Rcout = Rcpp::Rcpp_cout_get();
 Rcpp::Rostream<false>& Rcpp::Rcerr = Rcpp::Rcpp_cerr_get();
 #endif
 
+// cpp_sum_series
+SEXP cpp_sum_series(const Eigen::Map<Eigen::MatrixXd>& rows, const Rcpp::IntegerVector& slot, const Eigen::Map<Eigen::VectorXd>& bandwidth_weights, const Rcpp::List& options);
+RcppExport SEXP _lambdabar_cpp_sum_series(SEXP rowsSEXP, SEXP slotSEXP, SEXP bandwidth_weightsSEXP, SEXP optionsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type rows(rowsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type bandwidth_weights(bandwidth_weightsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type options(optionsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_sum_series(rows, slot, bandwidth_weights, options));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_heteroskedastic
+SEXP cpp_heteroskedastic(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& core, int type, int threads);
+RcppExport SEXP _lambdabar_cpp_heteroskedastic(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coreSEXP, SEXP typeSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type core(coreSEXP);
+    Rcpp::traits::input_parameter< int >::type type(typeSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_heteroskedastic(design, period, n_periods, core, type, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_clustered
+SEXP cpp_clustered(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& core, const Rcpp::List& codes, const Rcpp::NumericVector& n_codes, const std::string& small, int threads);
+RcppExport SEXP _lambdabar_cpp_clustered(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coreSEXP, SEXP codesSEXP, SEXP n_codesSEXP, SEXP smallSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type core(coreSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type codes(codesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericVector& >::type n_codes(n_codesSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type small(smallSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_clustered(design, period, n_periods, core, codes, n_codes, small, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_wald
+SEXP cpp_wald(const Eigen::Map<Eigen::VectorXd>& theta, const Eigen::Map<Eigen::MatrixXd>& vcov, const Eigen::Map<Eigen::MatrixXd>& restrictions, const Eigen::Map<Eigen::VectorXd>& value);
+RcppExport SEXP _lambdabar_cpp_wald(SEXP thetaSEXP, SEXP vcovSEXP, SEXP restrictionsSEXP, SEXP valueSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type theta(thetaSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type vcov(vcovSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type restrictions(restrictionsSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type value(valueSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_wald(theta, vcov, restrictions, value));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_two_pass
+SEXP cpp_two_pass(const Rcpp::List& input);
+RcppExport SEXP _lambdabar_cpp_two_pass(SEXP inputSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_two_pass(input));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_shanken
+SEXP cpp_shanken(const Rcpp::List& input, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_shanken(SEXP inputSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_shanken(input, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_alpha_covariance
+SEXP cpp_alpha_covariance(const Rcpp::List& input, const std::string& kind, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_alpha_covariance(SEXP inputSEXP, SEXP kindSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type kind(kindSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_alpha_covariance(input, kind, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_alpha_tests
+SEXP cpp_alpha_tests(const Rcpp::List& input, const std::vector<std::string>& kinds, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_alpha_tests(SEXP inputSEXP, SEXP kindsSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< const std::vector<std::string>& >::type kinds(kindsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_alpha_tests(input, kinds, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_encode
 Rcpp::List cpp_encode(SEXP x);
 RcppExport SEXP _lambdabar_cpp_encode(SEXP xSEXP) {
@@ -108,8 +214,109 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_cross_sections
+SEXP cpp_cross_sections(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, double min_assets, int threads);
+RcppExport SEXP _lambdabar_cpp_cross_sections(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP min_assetsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< double >::type min_assets(min_assetsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_cross_sections(design, period, n_periods, min_assets, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_average_premia
+SEXP cpp_average_premia(const Eigen::Map<Eigen::MatrixXd>& slopes, const Eigen::Map<Eigen::MatrixXd>& std_error, const Eigen::Map<Eigen::VectorXd>& n_assets, const std::string& average);
+RcppExport SEXP _lambdabar_cpp_average_premia(SEXP slopesSEXP, SEXP std_errorSEXP, SEXP n_assetsSEXP, SEXP averageSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type slopes(slopesSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type std_error(std_errorSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type n_assets(n_assetsSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type average(averageSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_average_premia(slopes, std_error, n_assets, average));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_pooled
+SEXP cpp_pooled(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, int threads);
+RcppExport SEXP _lambdabar_cpp_pooled(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_pooled(design, period, n_periods, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_pooled_residuals
+Rcpp::NumericVector cpp_pooled_residuals(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& core);
+RcppExport SEXP _lambdabar_cpp_pooled_residuals(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coreSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type core(coreSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_pooled_residuals(design, period, n_periods, core));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_usage
+Rcpp::List cpp_usage(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::IntegerVector& asset, double n_assets, const Rcpp::LogicalVector& periods_in);
+RcppExport SEXP _lambdabar_cpp_usage(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP assetSEXP, SEXP n_assetsSEXP, SEXP periods_inSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type asset(assetSEXP);
+    Rcpp::traits::input_parameter< double >::type n_assets(n_assetsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::LogicalVector& >::type periods_in(periods_inSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_usage(design, period, n_periods, asset, n_assets, periods_in));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_linear_predictor
+Rcpp::NumericVector cpp_linear_predictor(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Eigen::Map<Eigen::VectorXd>& coef);
+RcppExport SEXP _lambdabar_cpp_linear_predictor(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coefSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type coef(coefSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_linear_predictor(design, period, n_periods, coef));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_response
+Rcpp::NumericVector cpp_response(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods);
+RcppExport SEXP _lambdabar_cpp_response(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_response(design, period, n_periods));
+    return rcpp_result_gen;
+END_RCPP
+}
 
 static const R_CallMethodDef CallEntries[] = {
+    {"_lambdabar_cpp_sum_series", (DL_FUNC) &_lambdabar_cpp_sum_series, 4},
+    {"_lambdabar_cpp_heteroskedastic", (DL_FUNC) &_lambdabar_cpp_heteroskedastic, 6},
+    {"_lambdabar_cpp_clustered", (DL_FUNC) &_lambdabar_cpp_clustered, 8},
+    {"_lambdabar_cpp_wald", (DL_FUNC) &_lambdabar_cpp_wald, 4},
+    {"_lambdabar_cpp_two_pass", (DL_FUNC) &_lambdabar_cpp_two_pass, 1},
+    {"_lambdabar_cpp_shanken", (DL_FUNC) &_lambdabar_cpp_shanken, 3},
+    {"_lambdabar_cpp_alpha_covariance", (DL_FUNC) &_lambdabar_cpp_alpha_covariance, 4},
+    {"_lambdabar_cpp_alpha_tests", (DL_FUNC) &_lambdabar_cpp_alpha_tests, 4},
     {"_lambdabar_cpp_encode", (DL_FUNC) &_lambdabar_cpp_encode, 1},
     {"_lambdabar_cpp_relabel", (DL_FUNC) &_lambdabar_cpp_relabel, 2},
     {"_lambdabar_cpp_missing_codes", (DL_FUNC) &_lambdabar_cpp_missing_codes, 2},
@@ -118,6 +325,13 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_column_health", (DL_FUNC) &_lambdabar_cpp_column_health, 3},
     {"_lambdabar_cpp_widen", (DL_FUNC) &_lambdabar_cpp_widen, 5},
     {"_lambdabar_cpp_period_values", (DL_FUNC) &_lambdabar_cpp_period_values, 3},
+    {"_lambdabar_cpp_cross_sections", (DL_FUNC) &_lambdabar_cpp_cross_sections, 5},
+    {"_lambdabar_cpp_average_premia", (DL_FUNC) &_lambdabar_cpp_average_premia, 4},
+    {"_lambdabar_cpp_pooled", (DL_FUNC) &_lambdabar_cpp_pooled, 4},
+    {"_lambdabar_cpp_pooled_residuals", (DL_FUNC) &_lambdabar_cpp_pooled_residuals, 4},
+    {"_lambdabar_cpp_usage", (DL_FUNC) &_lambdabar_cpp_usage, 6},
+    {"_lambdabar_cpp_linear_predictor", (DL_FUNC) &_lambdabar_cpp_linear_predictor, 4},
+    {"_lambdabar_cpp_response", (DL_FUNC) &_lambdabar_cpp_response, 3},
     {NULL, NULL, 0}
 };
 

@@ -8,21 +8,25 @@
 
 #include <lambdabar/base.hpp>
 
+inline Rcpp::List named_facts(const lambdabar::Error::Facts& facts) {
+  Rcpp::List out(facts.size());
+  Rcpp::CharacterVector names(facts.size());
+  for (std::size_t i = 0; i < facts.size(); ++i) {
+    out[i] = facts[i].second;
+    names[i] = facts[i].first;
+  }
+  out.names() = names;
+  return out;
+}
+
 template <class Body>
 SEXP guarded(const Body& body) {
   try {
     return body();
   } catch (const lambdabar::Error& error) {
-    Rcpp::List facts(error.facts().size());
-    Rcpp::CharacterVector names(error.facts().size());
-    for (std::size_t i = 0; i < error.facts().size(); ++i) {
-      facts[i] = error.facts()[i].second;
-      names[i] = error.facts()[i].first;
-    }
-    facts.names() = names;
     Rcpp::List out = Rcpp::List::create(Rcpp::_["tag"] = error.tag(),
                                         Rcpp::_["message"] = std::string(error.what()),
-                                        Rcpp::_["facts"] = facts);
+                                        Rcpp::_["facts"] = named_facts(error.facts()));
     out.attr("class") = "lb_core_error";
     return out;
   }

@@ -1,5 +1,4 @@
-#include <RcppEigen.h>
-
+#include "convert.h"
 #include "views.h"
 
 #include <lambdabar/panel/health.hpp>
@@ -7,20 +6,6 @@
 #include <lambdabar/panel/reshape.hpp>
 
 using lambdabar::Index;
-
-namespace {
-
-Rcpp::NumericVector one_based(const std::vector<Index>& rows) {
-  Rcpp::NumericVector out(rows.size());
-  for (std::size_t i = 0; i < rows.size(); ++i) out[i] = static_cast<double>(rows[i]) + 1.0;
-  return out;
-}
-
-Rcpp::NumericVector as_numeric(const std::vector<Index>& x) {
-  return Rcpp::NumericVector(x.begin(), x.end());
-}
-
-}  // namespace
 
 // [[Rcpp::export(rng = false)]]
 Rcpp::List cpp_encode(SEXP x) {

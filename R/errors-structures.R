@@ -1,0 +1,224 @@
+#' Error structures: how the influence rows of an estimate are summed
+#'
+#' An error structure says which influence rows may be correlated. It is a plain description:
+#' give it to an estimator (`errors =`), to [restate()], or several to [error_ladder()].
+#'
+#' | structure | applies to | allows |
+#' | --- | --- | --- |
+#' | `err_iid()` | averaged premia; pooled | independent periods; independent rows of equal variance |
+#' | `err_hac()` | averaged premia | autocorrelation and heteroskedasticity over periods |
+#' | `err_eiv()` | premia on estimated betas | as its `series`, and the error of the betas |
+#' | `err_moments()` | premia on estimated betas | both passes stacked as moments, any autocorrelation of all of them |
+#' | `err_misspec()` | premia on estimated betas | as robust `err_eiv()`, and a model that does not price the assets |
+#' | `err_hetero()` | pooled | independent rows of unequal variance |
+#' | `err_cluster()` | pooled | any correlation inside clusters, in any number of ways |
+#'
+#' @param adjust Whether to multiply by T/(T-1), so that independent periods give the sample
+#'   variance of the mean. Averages with unequal weights use the factor that is unbiased for
+#'   them.
+#' @param lags Number of lags, or how to choose it:
+#'   * a number: lags count calendar periods, gaps included. `"bartlett"` and `"parzen"`
+#'     divide by lags + 1, `"truncated"` gives lags 1 to `lags` full weight, `"qs"` divides by
+#'     `lags` itself (any positive number) and weighs all lags;
+#'   * `"rule"`: \eqn{\lfloor 4 (T/100)^{2/9} \rfloor}{floor(4 (T/100)^(2/9))};
+#'   * `"newey_west"`: the plug-in of Newey and West (1994), not for `"truncated"`;
+#'   * `"andrews"`: the AR(1) plug-in of Andrews (1991).
+#'
+#'   The plug-ins choose one bandwidth for all terms, with weight 1 on each premium and 0 on
+#'   the constant.
+#' @param kernel `"bartlett"` (Newey and West 1987), `"parzen"`, `"qs"` (quadratic spectral) or
+#'   `"truncated"`. The first three give positive semidefinite covariances; the last may not,
+#'   and then a warning says so.
+#' @param prewhiten Whether to fit a first-order vector autoregression first and to recolour
+#'   (Andrews and Monahan 1992).
+#' @param form `"shanken"`: the closed form of Shanken (1992), for errors that are independent
+#'   of the factors, homoskedastic and serially uncorrelated. `series` then gives the factors'
+#'   long-run covariance. It needs a balanced panel without `traits`. `"robust"`: the
+#'   influence rows of the premia with the betas' own error in them, summed by `series`
+#'   (Jagannathan and Wang 1998); valid under conditional heteroskedasticity, and on ragged
+#'   panels.
+#' @param series `err_iid()` or `err_hac()`: the sum over periods.
+#' @param type `"HC0"` (White 1980), `"HC1"` (times n/(n-P)), `"HC2"`, `"HC3"` (divided by one
+#'   less the leverage, and by its square; MacKinnon and White 1985).
+#' @param ... Names of the columns whose values are the clusters, as strings: one for each way.
+#'   `"asset"` and `"period"` mean the panel's keys, whatever their columns are called.
+#' @param small Small-sample factor of clustered errors with more than one way:
+#'   * `"each"` (default): each term of the inclusion and exclusion has its own
+#'     G/(G-1) (n-1)/(n-P);
+#'   * `"min"`: all have that of the way with the fewest clusters;
+#'   * `"none"`: no factor.
+#'
+#' @details
+#' `err_moments()` is the sandwich of Hansen (1982) for both passes stacked as moments, with
+#' the two-pass estimates as the choice of moments. Its covariance of premia and pricing
+#' errors equals, for each kernel and lag, the sum over the influence rows, and is computed
+#' that way; a bandwidth chosen from the data is chosen from those rows.
+#'
+#' `err_misspec()` adds to the rows of estimated betas what a wrong model and estimated weights
+#' add (Kan, Robotti and Shanken 2013); the premium is then the value that fits best under the
+#' weights of the second pass. Complete panels without traits.
+#'
+#' Clusters in several ways follow Cameron, Gelbach and Miller (2011) and Thompson (2011). The
+#' result need not be positive semidefinite: it is then repaired (negative eigenvalues of the
+#' matrix scaled by heteroskedasticity-consistent errors become zero) with a warning, and a
+#' coefficient whose own variance was not positive gets `NA`.
+#'
+#' @section Errors:
+#' `lambdabar_error_input` for values that an argument cannot take. That a structure does not
+#' apply to an estimate is found when the two meet (`lambdabar_error_unsupported`). A missing
+#' cluster id on a row that entered the estimate is `lambdabar_error_input`; fewer than two
+#' clusters are `lambdabar_error_sample`.
+#'
+#' @return An object of class `lb_errors`.
+#'
+#' @references
+#' Andrews (1991), Econometrica 59, 817-858. Andrews and Monahan (1992), Econometrica 60,
+#' 953-966. Cameron, Gelbach and Miller (2011), Journal of Business & Economic Statistics 29,
+#' 238-249. Hansen (1982), Econometrica 50, 1029-1054. Jagannathan and Wang (1998), Journal of
+#' Finance 53, 1285-1309. Kan, Robotti and Shanken (2013), Journal of Finance 68, 2617-2649. MacKinnon and White (1985), Journal of Econometrics 29, 305-325.
+#' Newey and West (1987), Econometrica 55, 703-708; (1994), Review of Economic Studies 61,
+#' 631-653. Shanken (1992), Review of Financial Studies 5, 1-33. Thompson (2011), Journal of
+#' Financial Economics 99, 1-10. White (1980), Econometrica 48, 817-838.
+#'
+#' @examples
+#' panel <- asset_panel(demo_market(firms = 60, months = 60), "firm", "month")
+#' fit <- price_traits(panel, ret ~ size + value, errors = err_hac(lags = 4))
+#' restate(fit, err_hac(lags = "andrews", kernel = "qs"))
+#'
+#' rival <- pooled(panel, ret ~ size + value, errors = err_cluster("asset", "period"))
+#' restate(rival, err_hetero("HC3"))
+#' @name error_structures
+NULL
+
+new_errors <- function(class, ...) structure(list(...), class = c(class, "lb_errors"))
+
+check_flag <- function(value, arg, call = rlang::caller_env()) {
+  if (!is.logical(value) || length(value) != 1L || is.na(value)) {
+    abort_input("{.arg {arg}} must be {.code TRUE} or {.code FALSE}.", call = call)
+  }
+  value
+}
+
+#' @rdname error_structures
+#' @export
+err_iid <- function(adjust = TRUE) {
+  new_errors("lb_err_iid", adjust = check_flag(adjust, "adjust"))
+}
+
+#' @rdname error_structures
+#' @export
+err_hac <- function(lags = "rule", kernel = "bartlett", prewhiten = FALSE, adjust = TRUE) {
+  kernel <- check_choice(kernel, c("bartlett", "parzen", "qs", "truncated"), "kernel")
+  if (is.numeric(lags)) {
+    if (length(lags) != 1L || !is.finite(lags) || lags < 0) {
+      abort_input("{.arg lags} must be one number, 0 or more.")
+    }
+    if (kernel != "qs" && lags != floor(lags)) {
+      abort_input("{.arg lags} must be a whole number for the {.val {kernel}} kernel.")
+    }
+  } else {
+    check_choice(lags, c("rule", "newey_west", "andrews"), "lags")
+    if (kernel == "truncated" && lags == "newey_west") {
+      abort_input("The Newey-West (1994) rule has no constant for the truncated kernel: give {.arg lags} as a number, or {.val andrews}.")
+    }
+  }
+  new_errors(
+    "lb_err_hac",
+    lags = lags, kernel = kernel, prewhiten = check_flag(prewhiten, "prewhiten"),
+    adjust = check_flag(adjust, "adjust")
+  )
+}
+
+#' @rdname error_structures
+#' @export
+err_eiv <- function(form = "shanken", series = err_iid()) {
+  new_errors(
+    "lb_err_eiv",
+    form = check_choice(form, c("shanken", "robust"), "form"), series = check_series(series)
+  )
+}
+
+#' @rdname error_structures
+#' @export
+err_moments <- function(series = err_hac()) {
+  new_errors("lb_err_moments", series = check_series(series))
+}
+
+#' @rdname error_structures
+#' @export
+err_misspec <- function(series = err_iid()) {
+  new_errors("lb_err_misspec", series = check_series(series))
+}
+
+#' @rdname error_structures
+#' @export
+err_hetero <- function(type = "HC1") {
+  new_errors("lb_err_hetero", type = check_choice(type, paste0("HC", 0:3), "type"))
+}
+
+#' @rdname error_structures
+#' @export
+err_cluster <- function(..., small = "each") {
+  ways <- list(...)
+  named <- vapply(ways, function(way) is.character(way) && length(way) == 1L && !is.na(way), NA)
+  if (!length(ways) || !all(named) || !is.null(names(ways)) && any(nzchar(names(ways)))) {
+    abort_input(c(
+      "{.fn err_cluster} takes names of columns as strings, one for each way.",
+      i = "For example {.code err_cluster(\"asset\", \"period\")}."
+    ))
+  }
+  ways <- unlist(ways)
+  if (anyDuplicated(ways)) {
+    abort_input("{.fn err_cluster} names {.val {unique(ways[duplicated(ways)])}} twice.")
+  }
+  new_errors(
+    "lb_err_cluster",
+    ways = ways, small = check_choice(small, c("each", "min", "none"), "small")
+  )
+}
+
+check_series <- function(series, call = rlang::caller_env()) {
+  if (!inherits(series, c("lb_err_iid", "lb_err_hac"))) {
+    abort_input("{.arg series} must be {.fn err_iid} or {.fn err_hac}.", call = call)
+  }
+  series
+}
+
+check_errors <- function(errors, call = rlang::caller_env()) {
+  if (!inherits(errors, "lb_errors")) {
+    abort_input(
+      "{.arg errors} must be an error structure such as {.fn err_hac}, not {.obj_type_friendly {errors}}.",
+      call = call
+    )
+  }
+  errors
+}
+
+# A short name of a structure, for tables.
+#' @export
+format.lb_errors <- function(x, ...) {
+  lags <- function(x) if (is.numeric(x$lags)) count_of(x$lags, "lag") else lag_rule_name(x$lags)
+  switch(class(x)[1L],
+    lb_err_iid = "independent",
+    lb_err_hac = paste0(kernel_name(x$kernel), ", ", lags(x), if (x$prewhiten) ", prewhitened"),
+    lb_err_eiv = paste0(if (x$form == "shanken") "Shanken" else "estimated betas", ", ", format(x$series)),
+    lb_err_misspec = paste0("misspecified model, ", format(x$series)),
+    lb_err_moments = paste0("stacked moments, ", format(x$series)),
+    lb_err_hetero = paste0("heteroskedastic, ", x$type),
+    lb_err_cluster = paste0("clustered by ", first_few(x$ways))
+  )
+}
+
+#' @export
+print.lb_errors <- function(x, ...) {
+  cat_lines(paste0("Error structure: ", format(x)))
+  invisible(x)
+}
+
+lag_rule_name <- function(rule) {
+  c(rule = "rule of thumb", newey_west = "Newey-West 1994", andrews = "Andrews 1991")[[rule]]
+}
+
+kernel_name <- function(kernel) {
+  c(bartlett = "Bartlett", parzen = "Parzen", qs = "quadratic spectral", truncated = "truncated")[[kernel]]
+}

@@ -1,0 +1,4 @@
+library(testthat)
+library(lambdabar)
+
+test_check("lambdabar")
