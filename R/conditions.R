@@ -81,13 +81,12 @@ core_result <- function(result, call = rlang::caller_env(), explain = list()) {
   }
   kinds <- c(
     rank = "rank", no_variation = "no_variation", constant_factor = "no_variation",
-    unsupported = "unsupported", too_few = "sample", clusters = "sample"
+    unsupported = "unsupported", too_few = "sample", too_few_rows = "sample", clusters = "sample"
   )
   kind <- kinds[result$tag]
   kind <- if (is.na(kind)) "input" else unname(kind)
-  message <- c(result$message, explain[[result$tag]])
   rlang::inject(abort_class(
-    kind, c("{message[[1L]]}", stats::setNames(as.list(message[-1L]), rep("i", length(message) - 1L))),
+    kind, c("{result$message}", i = explain[[result$tag]]),
     tag = result$tag, !!!result$facts, call = call, .envir = rlang::current_env()
   ))
 }

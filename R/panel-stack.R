@@ -59,7 +59,7 @@ numeric_matrix <- function(x, arg, call = rlang::caller_env()) {
     if (!all(usable)) {
       abort_input(
         c(
-          "{.arg {arg}} must be numeric, but column{?s} {.val {names(x)[!usable]}} {?is/are} not.",
+          "{.arg {arg}} must be numeric, but {cli::qty(sum(!usable))}column{?s} {.val {names(x)[!usable]}} {?is/are} not.",
           i = "Pass dates through {.arg period} and leave them out of {.arg {arg}}."
         ),
         column = names(x)[!usable], call = call
@@ -87,6 +87,6 @@ row_keys <- function(returns, T) {
 refuse_repeats <- function(names, arg, call = rlang::caller_env()) {
   twice <- unique(names[duplicated(names)])
   if (length(twice)) {
-    abort_input("Column name{?s} {.val {twice}} occur{?s/} twice in {.arg {arg}}.", column = twice, call = call)
+    abort_input("{cli::qty(twice)}Column name{?s} {.val {twice}} {cli::qty(twice)}occur{?s/} twice in {.arg {arg}}.", column = twice, call = call)
   }
 }

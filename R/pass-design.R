@@ -139,7 +139,7 @@ coded_variable <- function(value, label, call) {
 
 # The columns of each term, first variable fastest, as R's own model matrices order them.
 term_columns <- function(terms, variables) {
-  factors <- attr(terms, "factors")
+  factors <- full_coding(attr(terms, "factors"), attr(terms, "intercept"), variables)
   labels <- attr(terms, "term.labels")
   columns <- list()
   names <- character()
@@ -159,6 +159,22 @@ term_columns <- function(terms, variables) {
     from <- c(from, rep(label, length(term$columns)))
   }
   list(columns = columns, names = names, labels = from)
+}
+
+# Without a constant the first coded variable gets a column for every level, as in R's own
+# model matrices.
+full_coding <- function(factors, intercept, variables) {
+  coded <- vapply(variables, function(variable) variable$kind == "coded", NA)
+  if (intercept == 0L && any(coded)) {
+    for (j in seq_len(ncol(factors))) {
+      first <- which(factors[, j] > 0L & coded)
+      if (length(first)) {
+        factors[first[1L], j] <- 2L
+        break
+      }
+    }
+  }
+  factors
 }
 
 cross_columns <- function(term, columns, names) {

@@ -200,6 +200,7 @@ two_pass_result <- function(result, panel, terms, call = rlang::caller_env()) {
   factors <- setdiff(terms, "(Intercept)")
   explain <- list(
     constant_factor = if (!is.null(facts$factor)) paste0("The factor is {.val ", factors[facts$factor], "}."),
+    no_variation = if (!is.null(facts$term)) paste0("The term is {.val ", terms[facts$term], "}."),
     rank = if (!is.null(facts$term)) {
       paste0("The term at fault is {.val ", terms[facts$term], "}.")
     } else if (!is.null(facts$factor)) {
@@ -301,7 +302,7 @@ augment.lb_premia <- function(x, ...) {
     return(NextMethod())
   }
   covariance <- alpha_covariance(x)
-  std_error <- if (is.null(covariance)) rep(NA_real_, length(x$alpha)) else sqrt(diag(covariance))
+  std_error <- if (is.null(covariance)) rep(NA_real_, length(x$alpha)) else unname(sqrt(diag(covariance)))
   statistic <- ifelse(is.na(std_error) | std_error > 0, x$alpha / std_error, NA_real_)
   betas <- x$first$beta
   colnames(betas) <- paste0("beta_", colnames(betas))

@@ -42,7 +42,7 @@ pooled <- function(panel, formula, weights = NULL, errors = err_cluster("asset",
     lost <- fit$terms[fit$core$aliased]
     warn_class("sample", c(
       "{.val {lost}} {?is a combination/are combinations} of earlier terms: estimated as {.code NA}.",
-      i = "Remove {?it/them} from the formula, or reorder the terms to keep {?it/them} instead."
+      i = "{cli::qty(lost)}Remove {?it/them} from the formula, or reorder the terms to keep {?it/them} instead."
     ), term = lost)
   }
   restate(fit, errors)
@@ -51,17 +51,11 @@ pooled <- function(panel, formula, weights = NULL, errors = err_cluster("asset",
 fit_pooled <- function(panel, design, weights = NULL, call = rlang::caller_env()) {
   core <- core_result(
     cpp_pooled(design, panel$period, length(panel$periods), thread_count()), call,
-    list(input = "Weights must be zero or positive.")
-  )
-  if (core$n_used <= core$rank || core$rank == 0L) {
-    abort_sample(
-      c(
-        "{core$n_used} complete row{?s} {?is/are} too few for {length(design$terms)} term{?s}.",
-        i = "{.fn panel_health} shows which column is missing where."
-      ),
-      count = core$n_used, call = call
+    list(
+      input = "Weights must be zero or positive.",
+      too_few_rows = "{.fn panel_health} shows which column is missing where."
     )
-  }
+  )
   structure(
     list(
       kind = "pooled", terms = design$terms, estimate = stats::setNames(core$coef, design$terms),

@@ -133,7 +133,7 @@ refuse_too_few_periods <- function(design, sections, panel, call = rlang::caller
       c(
         "The characteristics are collinear in every period.",
         x = "{.val {terms}} {?is a combination/are combinations} of earlier terms.",
-        i = "Remove {?it/them} from the formula."
+        i = "{cli::qty(terms)}Remove {?it/them} from the formula."
       ),
       term = terms, call = call
     )

@@ -85,7 +85,7 @@ parse_restriction <- function(text, terms, call = rlang::caller_env()) {
   })
   unknown <- setdiff(unlist(lapply(expressions, all.vars)), terms)
   if (length(unknown)) {
-    abort_input("{.val {unknown}} in {.val {text}} {?is/are} not among the terms: {.val {terms}}.", term = unknown, call = call)
+    abort_input("{.val {unknown}} in {.val {text}} {cli::qty(unknown)}{?is/are} not among the terms: {.val {terms}}.", term = unknown, call = call)
   }
   arithmetic <- list2env(mget(c("+", "-", "*", "/", "^", "("), envir = baseenv()), parent = emptyenv())
   difference <- function(theta) {

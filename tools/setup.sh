@@ -197,8 +197,9 @@ use_writable_library() {
 fingerprint() {
   {
     Rscript --version 2>&1
-    find . \( -name .git -o -path ./tests -o -path ./tools -o -path ./vignettes \) -prune \
-      -o -type f ! -name '*.o' ! -name '*.so' ! -name '*.dll' -exec cksum {} + |
+    find . \
+      \( -name .git -o -path ./tests -o -path ./tools -o -path ./vignettes \) -prune -o \
+      -type f ! -name '*.o' ! -name '*.so' ! -name '*.dll' -exec cksum {} + |
       LC_ALL=C sort
   } | cksum
 }

@@ -59,9 +59,11 @@ using Extended = long double;
 using ExtendedMatrix = Eigen::Matrix<Extended, Eigen::Dynamic, Eigen::Dynamic>;
 using ExtendedVector = Eigen::Matrix<Extended, Eigen::Dynamic, 1>;
 
-// A column whose centred norm is no more than rounding of its values.
+// False for a column whose centred norm is no more than the rounding of its values. An
+// overflowing square is variation.
 inline bool varies_in(const Moments& m, Index variable, Index period) {
   const double square = m.cross(Moments::slot(variable, variable), period);
+  if (!std::isfinite(square)) return true;
   const double mean = m.mean(variable, period);
   const double noise = kRankTolerance * mean;
   return square > m.weight[period] * noise * noise;
