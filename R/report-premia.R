@@ -42,7 +42,7 @@ sample_lines <- function(fit, n_used, unit) {
   c(
     label_line("Sample", paste0(
       format_count(nobs(fit)), " of ", format_count(sum(usage$n_rows)), " rows, ",
-      count_of(usage$n_assets, "asset"), ", ", n_used, " of ", count_of(T, unit)
+      count_of(usage$n_assets, "asset"), ", ", format_count(n_used), " of ", count_of(T, unit)
     )),
     label_line("Left out", paste(c(dropped, lost_periods, usage$left_out), collapse = "; ")) |>
       Filter(f = function(line) !identical(trimws(line), "Left out"))
