@@ -120,8 +120,8 @@ error_covariance.lb_err_hetero <- function(errors, fit, call = rlang::caller_env
 
 #' @exportS3Method
 error_covariance.lb_err_misspec <- function(errors, fit, call = rlang::caller_env()) {
-  if (!is_two_pass(fit) || !fit$balanced) {
-    refuse_errors(errors, fit, "They need {.fn price_factors} on a complete panel without traits.", call)
+  if (!is_two_pass(fit)) {
+    refuse_errors(errors, fit, "Only {.fn price_factors} prices assets by a model; use {.fn err_hac} here.", call)
   }
   out <- first_pass_covariance(errors$series, fit$rows_misspecified, fit)
   out$phrase <- paste0("valid under a wrong model too (Kan, Robotti and Shanken 2013); ", out$phrase)

@@ -56,7 +56,7 @@
 #'
 #' `err_misspec()` adds to the rows of estimated betas what a wrong model and estimated weights
 #' add (Kan, Robotti and Shanken 2013); the premium is then the value that fits best under the
-#' weights of the second pass. Complete panels without traits.
+#' weights of the second pass.
 #'
 #' Clusters in several ways follow Cameron, Gelbach and Miller (2011) and Thompson (2011). The
 #' result need not be positive semidefinite: it is then repaired (negative eigenvalues of the

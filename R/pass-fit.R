@@ -259,8 +259,8 @@ missing_phrases <- function(variables, counts) {
 #' @param fit From [price_traits()] or [price_factors()].
 #' @return A matrix with one row a period and one column a term. Rows sum to zero; under
 #'   independent periods and without small-sample factor the covariance is the sum of their
-#'   outer products. With [err_eiv()] in its robust form and [err_moments()] the rows carry
-#'   the betas' own error; for all other structures they are \eqn{\omega_t (b_t - \bar b)}{w_t (b_t - b)}.
+#'   outer products. With [err_eiv()] in its robust form, [err_moments()] and [err_misspec()]
+#'   the rows carry the betas' own error (and that of a wrong model); for all other structures they are \eqn{\omega_t (b_t - \bar b)}{w_t (b_t - b)}.
 #' @section Errors: `lambdabar_error_unsupported` for a pooled fit, whose rows are not kept.
 #' @examples
 #' panel <- asset_panel(demo_market(firms = 60, months = 24), "firm", "month")
@@ -272,10 +272,15 @@ influence_rows <- function(fit) {
   if (!inherits(fit, "lb_premia")) {
     abort_unsupported("A pooled fit does not keep its {nobs(fit)} influence rows.")
   }
-  carries_betas <- inherits(fit$errors, "lb_err_moments") ||
-    inherits(fit$errors, "lb_err_eiv") && fit$errors$form == "robust"
-  rows <- if (carries_betas) fit$rows_estimated else fit$rows
-  slots <- if (carries_betas) fit$slot_estimated else fit$slot
+  errors <- fit$errors
+  if (inherits(errors, "lb_err_misspec")) {
+    rows <- fit$rows_misspecified
+  } else if (inherits(errors, "lb_err_moments") || inherits(errors, "lb_err_eiv") && errors$form == "robust") {
+    rows <- fit$rows_estimated
+  } else {
+    rows <- fit$rows
+  }
+  slots <- if (identical(rows, fit$rows)) fit$slot else fit$slot_estimated
   rownames(rows) <- format_key(fit$panel$slot_labels[slots])
   rows
 }

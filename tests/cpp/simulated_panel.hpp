@@ -1,4 +1,5 @@
-// Small invented panels for identities: nothing in a test rests on the numbers themselves.
+// Small invented panels for identities: nothing in a test rests on the numbers
+// themselves.
 #pragma once
 
 #include <lambdabar/base.hpp>

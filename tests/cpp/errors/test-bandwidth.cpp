@@ -53,8 +53,8 @@ TEST(Bandwidth, newey_west_by_hand) {
   EXPECT_EQ(parzen.lags, std::floor(2.6614 * std::pow(0.14 * 0.14 * 5.0, 0.2)));
   EXPECT_EQ(parzen.divisor, parzen.lags + 1.0);
   // Three pilot lags (4 * 0.05^(2/25) = 3.15): s(0) = 48, s(2) = -482.
-  const auto qs = detail::newey_west_bandwidth(
-      x.col(0), 5, with(Kernel::qs, LagRule::newey_west));
+  const auto qs =
+      detail::newey_west_bandwidth(x.col(0), 5, with(Kernel::qs, LagRule::newey_west));
   const double ratio = 482.0 / 48.0;
   EXPECT_NEAR(qs.value, 1.3221 * std::pow(ratio * ratio * 5.0, 0.2), 1e-13);
   EXPECT_FALSE(qs.negative_s0);
@@ -120,8 +120,8 @@ TEST(Bandwidth, persistence_is_kept_from_one) {
   Matrix x(6, 1);
   x << 1, 2, 4, 8, 16, 32;  // a coefficient of two
   const double rho = 0.97;
-  EXPECT_NEAR(detail::andrews_bandwidth(x + 1e-3 * Matrix::Ones(6, 1), Vector::Ones(1),
-                                        Kernel::qs),
+  EXPECT_NEAR(detail::andrews_bandwidth(
+                  x + 1e-3 * Matrix::Ones(6, 1), Vector::Ones(1), Kernel::qs),
               1.3221 * std::pow(4.0 * rho * rho / std::pow(1.0 - rho, 4) * 6.0, 0.2),
               1e-6);
 }

@@ -29,7 +29,7 @@ TEST(Kernels, have_the_weights_of_their_definitions) {
   EXPECT_EQ(kernel_weight(Kernel::bartlett, 1.5), 0.0);
   // Both branches of Parzen's window meet at 1/2 with value 1/4.
   EXPECT_DOUBLE_EQ(kernel_weight(Kernel::parzen, 0.5), 0.25);
-  EXPECT_DOUBLE_EQ(kernel_weight(Kernel::parzen, std::nextafter(0.5, 1.0)), 0.25);
+  EXPECT_NEAR(kernel_weight(Kernel::parzen, std::nextafter(0.5, 1.0)), 0.25, 1e-15);
   EXPECT_DOUBLE_EQ(kernel_weight(Kernel::parzen, 0.25), 1.0 - 6.0 / 16 + 6.0 / 64);
   EXPECT_DOUBLE_EQ(kernel_weight(Kernel::parzen, 0.75), 2.0 / 64);
   EXPECT_EQ(kernel_weight(Kernel::parzen, 1.2), 0.0);

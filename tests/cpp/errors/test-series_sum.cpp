@@ -18,18 +18,22 @@ SeriesOptions fixed(Kernel kernel, double lags, bool prewhiten = false) {
 
 const Kernel kAll[] = {Kernel::bartlett, Kernel::parzen, Kernel::qs, Kernel::truncated};
 
-SeriesSum sum(const Matrix& rows, const SeriesOptions& options,
+SeriesSum sum(const Matrix& rows,
+              const SeriesOptions& options,
               const std::vector<Index>& slot = {}) {
   return sum_series(rows, slot, Vector::Ones(rows.cols()), options);
 }
 
 // The definition, pair by pair.
-Matrix pair_by_pair(const Matrix& h, const std::vector<Index>& slot, Kernel kernel,
+Matrix pair_by_pair(const Matrix& h,
+                    const std::vector<Index>& slot,
+                    Kernel kernel,
                     double divisor) {
   Matrix S = Matrix::Zero(h.cols(), h.cols());
   for (Index t = 0; t < h.rows(); ++t)
     for (Index s = 0; s < h.rows(); ++s) {
-      const Index lag = slot[static_cast<std::size_t>(t)] - slot[static_cast<std::size_t>(s)];
+      const Index lag =
+          slot[static_cast<std::size_t>(t)] - slot[static_cast<std::size_t>(s)];
       if (divisor == 0.0 && lag != 0) continue;
       const double weight =
           lag == 0 ? 1.0 : kernel_weight(kernel, static_cast<double>(lag) / divisor);
@@ -39,13 +43,13 @@ Matrix pair_by_pair(const Matrix& h, const std::vector<Index>& slot, Kernel kern
 }
 
 TEST(SeriesSum, newey_west_of_a_mean_by_hand) {
-  // The series 1, 2, 4, 7, 11: autocovariance sums 66, 25, -8, -26 over 5, worked by hand;
-  // standard errors sqrt(66), sqrt(91), sqrt(94), sqrt(82.5) over 5.
+  // The series 1, 2, 4, 7, 11: autocovariance sums 66, 25, -8, -26 over 5, worked by
+  // hand; standard errors sqrt(66), sqrt(91), sqrt(94), sqrt(82.5) over 5.
   Matrix rows(5, 1);
   rows << -4, -3, -1, 2, 6;
   rows /= 5.0;
-  const double printed[] = {1.6248076809271921, 1.9078784028338913, 1.9390719429665317,
-                            1.8165902124584950};
+  const double printed[] = {
+      1.6248076809271921, 1.9078784028338913, 1.9390719429665317, 1.8165902124584950};
   for (int lags = 0; lags < 4; ++lags) {
     const SeriesSum s = sum(rows, fixed(Kernel::bartlett, lags));
     EXPECT_NEAR(std::sqrt(s.S(0, 0)) / printed[lags], 1.0, 1e-14);
@@ -62,9 +66,10 @@ TEST(SeriesSum, without_lags_is_the_plain_sum_to_the_last_bit) {
   for (Kernel kernel : kAll)
     EXPECT_TRUE((sum(rows, fixed(kernel, 0)).S.array() == plain.array()).all());
   // A divisor below one reaches no lag either.
-  EXPECT_TRUE((detail::kernel_sum(rows, detail::consecutive(61), Kernel::bartlett, 0.7)
-                   .array() == plain.array())
-                  .all());
+  EXPECT_TRUE(
+      (detail::kernel_sum(rows, detail::consecutive(61), Kernel::bartlett, 0.7).array() ==
+       plain.array())
+          .all());
 }
 
 TEST(SeriesSum, follows_its_definition_with_and_without_gaps) {
@@ -126,8 +131,9 @@ TEST(SeriesSum, prewhitening_one_series_by_hand) {
   const Vector lag = h.col(0).head(79), lead = h.col(0).tail(79);
   const double phi = lag.dot(lead) / lag.squaredNorm();
   const Matrix v = lead - phi * lag;
-  const double expected = pair_by_pair(v, detail::consecutive(79), Kernel::bartlett, 3)(0, 0) /
-                          ((1.0 - phi) * (1.0 - phi));
+  const double expected =
+      pair_by_pair(v, detail::consecutive(79), Kernel::bartlett, 3)(0, 0) /
+      ((1.0 - phi) * (1.0 - phi));
   const SeriesSum s = sum(h, fixed(Kernel::bartlett, 2, true));
   EXPECT_NEAR(s.S(0, 0) / expected, 1.0, 1e-13);
   EXPECT_FALSE(s.capped_prewhitening);
@@ -197,7 +203,8 @@ TEST(SeriesSum, lags_beyond_the_calendar_are_capped) {
   EXPECT_EQ(s.lags, 9.0);
 }
 
-std::string tag_of(const Matrix& h, const SeriesOptions& options,
+std::string tag_of(const Matrix& h,
+                   const SeriesOptions& options,
                    const std::vector<Index>& slot) {
   try {
     sum(h, options, slot);

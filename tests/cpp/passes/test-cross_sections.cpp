@@ -31,8 +31,8 @@ void expect_reference(const Design& design, const CrossSections& fit, double tol
     for (Index j = 0; j < wanted.coef.size(); ++j) {
       const double scale = std::abs(wanted.coef[j]) + wanted.std_error[j];
       expect_close(fit.coef(j, t), wanted.coef[j], scale, tolerance);
-      expect_close(fit.std_error(j, t), wanted.std_error[j], wanted.std_error[j],
-                   tolerance);
+      expect_close(
+          fit.std_error(j, t), wanted.std_error[j], wanted.std_error[j], tolerance);
     }
     expect_close(fit.rss[t], wanted.rss, wanted.rss, tolerance);
     expect_close(fit.tss[t], wanted.tss, wanted.tss, tolerance);
@@ -113,6 +113,18 @@ TEST(CrossSections, RowOrderDoesNotMatter) {
   expect_same_fit(sorted, solve(shuffled.design(true, true)), 1e-12);
 }
 
+TEST(CrossSections, ManyThinPeriodsInAnyOrder) {
+  Panel panel = ragged_panel(8, 20000, 1, 23);
+  panel.x[0][700] = kNaN;
+  const Panel shuffled = panel.shuffled(5);
+  const CrossSections sorted = solve(panel.design(true, true));
+  // Three or four rows can leave a residual of a thousandth, and so three digits fewer.
+  expect_same_fit(sorted, solve(shuffled.design(true, true)), 1e-9);
+  const auto n_estimated =
+      std::count(sorted.status.begin(), sorted.status.end(), PeriodStatus::estimated);
+  EXPECT_GT(n_estimated, 19000);
+}
+
 TEST(CrossSections, ThreadsDoNotChangeABit) {
   Panel panel = ragged_panel(5000, 60, 3, 22);
   // Some periods go back to their rows, some need another shift.
@@ -163,8 +175,8 @@ void expect_shifted_reference(const Panel& rows, double mean, double tolerance) 
     for (Index j = 1; j < wanted.coef.size(); ++j) {
       const double scale = std::abs(wanted.coef[j]) + wanted.std_error[j];
       expect_close(fit.coef(j, t), wanted.coef[j], scale, tolerance);
-      expect_close(fit.std_error(j, t), wanted.std_error[j], wanted.std_error[j],
-                   tolerance);
+      expect_close(
+          fit.std_error(j, t), wanted.std_error[j], wanted.std_error[j], tolerance);
     }
     const double constant = wanted.coef[0] - mean - wanted.coef[1] * mean;
     expect_close(fit.coef(0, t), constant, mean, tolerance);
@@ -265,7 +277,9 @@ TEST(CrossSections, IncompleteRowsAreCountedByTheFirstOffender) {
   EXPECT_EQ(fit.n_used[0] + 6, fit.n_rows[0]);
 
   Panel cut = whole;
-  const auto drop = [](auto& values) { values.erase(values.begin(), values.begin() + 6); };
+  const auto drop = [](auto& values) {
+    values.erase(values.begin(), values.begin() + 6);
+  };
   drop(cut.period);
   drop(cut.asset);
   drop(cut.y);
@@ -278,15 +292,17 @@ TEST(CrossSections, IncompleteRowsAreCountedByTheFirstOffender) {
 }
 
 TEST(CrossSections, SumsThatOverflowLoseNoRows) {
-  // Each value is finite while 40 of them are not.
-  Panel panel = ragged_panel(60, 2, 1, 72);
-  for (double& x : panel.x[0]) x = (x + 4) * 1e307;
-  for (double& y : panel.y) y *= 1e100;
-  const CrossSections fit = solve(panel.design());
-  EXPECT_EQ(fit.missing.sum(), 0);
   Panel plain = ragged_panel(60, 2, 1, 72);
-  for (double& x : plain.x[0]) x += 4;
-  const CrossSections wanted = solve(plain.design());
+  for (std::size_t i = 0; i < plain.n(); ++i) {
+    // Far below the others, so that distances from the first row all add up.
+    const bool first = i == 0 || plain.period[i] != plain.period[i - 1];
+    plain.x[0][i] = first ? -8 : plain.x[0][i] + 4;
+  }
+  Panel panel = plain;
+  for (double& x : panel.x[0]) x *= 1e307;
+  for (double& y : panel.y) y *= 1e100;
+  const CrossSections wanted = solve(plain.design()), fit = solve(panel.design());
+  EXPECT_EQ(fit.missing.sum(), 0);
   for (Index t = 0; t < 2; ++t) {
     ASSERT_EQ(fit.status[static_cast<std::size_t>(t)], PeriodStatus::estimated);
     expect_close(fit.coef(1, t) * 1e207, wanted.coef(1, t), 1, 1e-12);
@@ -332,10 +348,13 @@ TEST(CrossSections, EveryPeriodHasItsStatus) {
       panel.x[2].push_back(t == 3 ? x0 + x1 : normal(engine));
     }
   }
-  const std::vector<PeriodStatus> wanted = {
-      PeriodStatus::estimated, PeriodStatus::too_few_assets, PeriodStatus::no_variation,
-      PeriodStatus::rank_deficient, PeriodStatus::empty, PeriodStatus::estimated,
-      PeriodStatus::empty};
+  const std::vector<PeriodStatus> wanted = {PeriodStatus::estimated,
+                                            PeriodStatus::too_few_assets,
+                                            PeriodStatus::no_variation,
+                                            PeriodStatus::rank_deficient,
+                                            PeriodStatus::empty,
+                                            PeriodStatus::estimated,
+                                            PeriodStatus::empty};
   for (const Panel& rows : {panel, panel.by_asset(), panel.shuffled(2)}) {
     const CrossSections fit = solve(rows.design());
     EXPECT_EQ(fit.status, wanted);
@@ -455,7 +474,6 @@ TEST(CrossSections, CertifiedSetsReachTheDigitsOfAQr) {
     if (!std::isnan(wanted.sd)) {
       EXPECT_GE(digits(fit.std_error.col(0), set.sd), wanted.sd) << wanted.name;
     }
-    RecordProperty(wanted.name, std::to_string(digits(fit.coef.col(0), set.estimate)));
   }
 }
 

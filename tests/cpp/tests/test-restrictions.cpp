@@ -43,8 +43,8 @@ TEST(Restrictions, regular_case_is_the_textbook_form) {
   // Units and order of the restrictions do not matter.
   Matrix mixed(2, 2);
   mixed << 0.0, 1e5, 1e-4, 0.0;
-  EXPECT_NEAR(wald_test(e.theta, e.V, mixed * L, mixed * r).statistic / w.statistic, 1.0,
-              1e-11);
+  EXPECT_NEAR(
+      wald_test(e.theta, e.V, mixed * L, mixed * r).statistic / w.statistic, 1.0, 1e-11);
 }
 
 TEST(Restrictions, a_repeated_restriction_counts_once) {

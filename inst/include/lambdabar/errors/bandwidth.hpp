@@ -1,4 +1,5 @@
-// How many lags: fixed, the rule of thumb floor(4 (T/100)^(2/9)), and two data-driven rules.
+// How many lags: fixed, the rule of thumb floor(4 (T/100)^(2/9)), and two data-driven
+// rules.
 //
 // Newey and West (1994), on the combination x_t = v'h_t, with s_j its autocovariances:
 //   n = floor(4 (T/100)^q), 3 instead of 4 after prewhitening; q = 2/9 bartlett,
@@ -7,16 +8,18 @@
 //   parzen   2.6614 ((s(2)/s(0))^2)^(1/5) T^(1/5)     lags = floor of it
 //   qs       1.3221 ((s(2)/s(0))^2)^(1/5) T^(1/5)     divisor itself
 // T is the length before prewhitening. The constants 4 and 3 agree with
-// sandwich::bwNeweyWest. s(0) is a truncated sum and can be negative: the square keeps the
-// rule defined, `negative_s0` tells.
+// sandwich::bwNeweyWest. s(0) is a truncated sum and can be negative: the square keeps
+// the rule defined, `negative_s0` tells.
 //
 // Andrews (1991), from an AR(1) without constant for each column a (rho, s2), weights v:
 //   alpha(1) = sum v 4 rho^2 s2^2 / ((1-rho)^6 (1+rho)^2) / sum v s2^2 / (1-rho)^4
 //   alpha(2) = sum v 4 rho^2 s2^2 / (1-rho)^8             / sum v s2^2 / (1-rho)^4
 //   bartlett 1.1447 (alpha(1) T)^(1/3); (alpha(2) T)^(1/5) times 2.6614 parzen,
 //   1.3221 qs, 0.6611 truncated: the divisor, a real number
-// T is the length of the series the rule sees (one less after prewhitening); rho is kept in
-// [-0.97, 0.97] (a choice). sandwich fits the AR(1) with a constant, an O(1/T) difference.
+// T is the length of the series the rule sees (one less after prewhitening); rho is kept
+// in
+// [-0.97, 0.97] (a choice). sandwich fits the AR(1) with a constant, an O(1/T)
+// difference.
 //
 // Rows may carry any common factor (the 1/T of summing rows): the rules are free of it.
 // Weights may not be negative. Newey and West give no rule for the truncated kernel.
@@ -70,8 +73,8 @@ inline PlugIn newey_west_bandwidth(const Vector& x,
                                    const SeriesOptions& options) {
   if (options.kernel == Kernel::truncated)
     throw Error("unsupported", "No Newey-West lag rule for the truncated kernel.");
-  const Index n = std::min(
-      newey_west_pilot(options.kernel, options.prewhiten, n_periods), x.size() - 1);
+  const Index n = std::min(newey_west_pilot(options.kernel, options.prewhiten, n_periods),
+                           x.size() - 1);
   const bool first_order = options.kernel == Kernel::bartlett;
   double s0 = lagged_product(x, 0);
   double sm = 0.0;
@@ -83,11 +86,9 @@ inline PlugIn newey_west_bandwidth(const Vector& x,
   }
   if (s0 == 0.0) return {0.0, false};
   const double ratio = (sm / s0) * (sm / s0) * static_cast<double>(n_periods);
-  const double value = first_order ? 1.1447 * std::cbrt(ratio)
-                       : options.kernel == Kernel::parzen
-                           ? 2.6614 * std::pow(ratio, 0.2)
-                           : 1.3221 * std::pow(ratio, 0.2);
-  // ((s/s)^2)^(1/5) T^(1/5) and its cube-root sibling are one root of the product.
+  const double value = first_order                        ? 1.1447 * std::cbrt(ratio)
+                       : options.kernel == Kernel::parzen ? 2.6614 * std::pow(ratio, 0.2)
+                                                          : 1.3221 * std::pow(ratio, 0.2);
   return {value, s0 < 0.0};
 }
 
@@ -125,9 +126,10 @@ inline void check_weights(const Vector& weights, Index n_columns) {
   const bool usable = weights.size() == n_columns && (weights.array() >= 0.0).all() &&
                       (weights.array() > 0.0).any();
   if (!usable)
-    throw Error("input",
-                "Bandwidth weights must be one non-negative number a column, not all zero.",
-                {{"n_columns", static_cast<double>(n_columns)}});
+    throw Error(
+        "input",
+        "Bandwidth weights must be one non-negative number a column, not all zero.",
+        {{"n_columns", static_cast<double>(n_columns)}});
 }
 
 inline Bandwidth from_lags(Kernel kernel, double lags, double longest) {
@@ -148,8 +150,8 @@ inline Bandwidth from_divisor(Kernel kernel, double divisor, double longest) {
 
 }  // namespace detail
 
-// series: the rows the rule sees (prewhitened ones if so), T x P; weights: P; n_periods: T
-// before prewhitening; longest_lag: beyond it a lag is capped.
+// series: the rows the rule sees (prewhitened ones if so), T x P; weights: P; n_periods:
+// T before prewhitening; longest_lag: beyond it a lag is capped.
 inline Bandwidth choose_bandwidth(const Matrix& series,
                                   const Vector& weights,
                                   Index n_periods,
@@ -159,7 +161,8 @@ inline Bandwidth choose_bandwidth(const Matrix& series,
   switch (options.rule) {
     case LagRule::fixed:
       if (!(options.lags >= 0.0) || std::isinf(options.lags))
-        throw Error("input", "The number of lags must be finite and not negative.",
+        throw Error("input",
+                    "The number of lags must be finite and not negative.",
                     {{"lags", options.lags}});
       return detail::from_lags(options.kernel, options.lags, longest);
     case LagRule::rule_of_thumb: {
@@ -180,9 +183,10 @@ inline Bandwidth choose_bandwidth(const Matrix& series,
     }
     case LagRule::andrews:
       detail::check_weights(weights, series.cols());
-      return detail::from_divisor(options.kernel,
-                                  detail::andrews_bandwidth(series, weights, options.kernel),
-                                  longest);
+      return detail::from_divisor(
+          options.kernel,
+          detail::andrews_bandwidth(series, weights, options.kernel),
+          longest);
   }
   throw Error("input", "Unknown lag rule.");
 }

@@ -7,20 +7,21 @@
 //   D ways:  V = sum over nonempty S of {1..D} of (-1)^(|S| + 1) c_S sum_g psi_g psi_g',
 //            g the groups of the intersection of the dimensions in S
 //            (Cameron, Gelbach and Miller, 2011; Thompson, 2011)
-//   c_S = G_S / (G_S - 1) (n - 1) / (n - r)  `each`;  the smallest G of a single dimension
-//   in every term  `min`;  1  `none`.
+//   c_S = G_S / (G_S - 1) (n - 1) / (n - r)  `each`;  the smallest G of a single
+//   dimension in every term  `min`;  1  `none`.
 //
 // Groups are counted over complete rows. Intersections are paired integers: nested
 // dimensions share one grouping, pairs that never repeat need no groups at all, the rest
 // gets new codes. Terms of one grouping are added up before they meet the data, so a
 // dimension nested in another cancels exactly.
 //
-// With D >= 2 the sum need not be positive semidefinite. Negative eigenvalues are then cut
-// off after scaling by HC0 errors; unscaled, the cut would depend on the regressors' units.
+// With D >= 2 the sum need not be positive semidefinite. Negative eigenvalues are then
+// cut off after scaling by HC0 errors; unscaled, the cut would depend on the regressors'
+// units.
 //
-// Shapes: rank r; matrices are r x r over the kept terms. Memory: r numbers a group and, for
-// each intersection that repeats, one integer a row. Cost: one read of the columns and
-// n r (r + groupings). Rows are summed in order: same bits for any number of threads.
+// Shapes: rank r; matrices are r x r over the kept terms. Memory: r numbers a group and,
+// for each intersection that repeats, one integer a row. Cost: one read of the columns
+// and n r (r + groupings). Rows are summed in order: same bits for any number of threads.
 // Throws Error "cluster_id", "clusters", "leverage". Not handled: absorbed effects.
 #pragma once
 
@@ -55,8 +56,7 @@ inline constexpr double kVarianceTolerance = 1e-13;
 inline constexpr double kLeverageTolerance = 1e-10;
 inline constexpr Index kBlocksAtATime = 16;
 
-// Column i of the result is the whitened score of the block's complete row i, before the
-// residual is scaled by `factor`.
+// Whitened scores of a block's complete rows: column i is W v w e of rows[i].
 struct BlockScores {
   Matrix scores;            // r x n
   std::vector<Index> rows;  // n
@@ -158,7 +158,9 @@ inline Grouping single_dimension(const UsedRows& used,
 }
 
 // Every group of `fine` lies inside one group of `coarse`.
-inline bool is_nested(const UsedRows& used, const Grouping& fine, const Grouping& coarse) {
+inline bool is_nested(const UsedRows& used,
+                      const Grouping& fine,
+                      const Grouping& coarse) {
   if (!fine.code) return true;
   if (!coarse.code) return fine.n_groups == used.n_used;
   if (fine.n_groups < coarse.n_groups) return false;
@@ -316,8 +318,8 @@ class GroupSummer {
   Matrix meat_;  // lower triangle
 };
 
-// One pass for all groupings: scores of some blocks side by side, then each grouping takes
-// them in row order.
+// One pass for all groupings: scores of some blocks side by side, then each grouping
+// takes them in row order.
 inline std::vector<ClusterSums> sum_groupings(const Design& design,
                                               const PooledFit& fit,
                                               const std::vector<Grouping>& groupings,
@@ -348,7 +350,9 @@ inline std::vector<ClusterSums> sum_groupings(const Design& design,
   return sums;
 }
 
-inline double small_sample_factor(SmallSample small, Index n_groups, const PooledFit& fit) {
+inline double small_sample_factor(SmallSample small,
+                                  Index n_groups,
+                                  const PooledFit& fit) {
   if (small == SmallSample::none) return 1;
   const double g = static_cast<double>(n_groups), n = static_cast<double>(fit.n_used);
   return g / (g - 1) * ((n - 1) / (n - static_cast<double>(fit.rank)));
@@ -368,8 +372,8 @@ inline void make_semidefinite(const Vector& scale, ClusterCovariance& to) {
   to.n_clipped = (values.array() < -kEigenTolerance * largest).count();
   if (to.n_clipped == 0) return;
   const Matrix& vectors = eigen.eigenvectors();
-  const Matrix half = forward.asDiagonal() * vectors *
-                      values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
+  const Matrix half =
+      forward.asDiagonal() * vectors * values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
   to.vcov = half * half.transpose();
 }
 
@@ -455,8 +459,15 @@ inline ClusterCovariance clustered(const Design& design,
   const detail::Intersections sets(used, codes, n_codes);
   std::vector<detail::Grouping> groupings = sets.groupings();
   const std::size_t n_groupings = groupings.size();
-  // Last: every row its own group, whose errors scale the eigenvalues.
-  if (n_dimensions > 1) groupings.push_back({nullptr, 0, fit.n_used});
+  // Every row its own group: those errors scale the eigenvalues.
+  const std::size_t rows_alone = static_cast<std::size_t>(
+      std::find_if(groupings.begin(),
+                   groupings.end(),
+                   [](const detail::Grouping& g) { return !g.code; }) -
+      groupings.begin());
+  if (n_dimensions > 1 && rows_alone == n_groupings) {
+    groupings.push_back({nullptr, 0, fit.n_used});
+  }
   const std::vector<ClusterSums> sums =
       detail::sum_groupings(design, fit, groupings, threads);
 
@@ -468,8 +479,7 @@ inline ClusterCovariance clustered(const Design& design,
     const std::size_t g = sets.grouping_of(term);
     to.n_groups_terms.push_back(sums[g].n_groups);
     const Index counted = small == SmallSample::min ? smallest : sums[g].n_groups;
-    factor[g] +=
-        sets.sign(term) * detail::small_sample_factor(small, counted, fit);
+    factor[g] += sets.sign(term) * detail::small_sample_factor(small, counted, fit);
   }
   to.raw.setZero(fit.rank, fit.rank);
   Vector size = Vector::Zero(fit.rank);
@@ -480,7 +490,7 @@ inline ClusterCovariance clustered(const Design& design,
   for (Index j = 0; j < fit.rank; ++j) {
     to.not_positive.push_back(to.raw(j, j) <= detail::kVarianceTolerance * size[j]);
   }
-  const Matrix& scale = n_dimensions > 1 ? sums.back().meat : to.raw;
+  const Matrix& scale = n_dimensions > 1 ? sums[rows_alone].meat : to.raw;
   detail::make_semidefinite(scale.diagonal().cwiseMax(0.0).cwiseSqrt(), to);
   to.nested_in.assign(n_dimensions, -1);
   detail::find_nesting(used, groupings, to.nested_in);

@@ -4,8 +4,9 @@
 //   qs         3 / y^2 (sin y / y - cos y), y = 6 pi x / 5, all lags (Andrews 1991)
 //   truncated  1 up to 1 (Hansen and Hodrick 1980); the sum need not be positive
 //
-// "L lags" as a user counts them means divisor L + 1 for bartlett and parzen, whose weight
-// at the divisor itself is zero, and divisor L for qs and truncated. Divisor 0: no lags.
+// "L lags" as a user counts them means divisor L + 1 for bartlett and parzen, whose
+// weight at the divisor itself is zero, and divisor L for qs and truncated. Divisor 0: no
+// lags.
 #pragma once
 
 #include "../base.hpp"

@@ -1,10 +1,11 @@
 // Symmetric matrices that should be positive: how far they are from it, their repair by
 // clipping eigenvalues, and a generalised inverse with a rank.
 //
-// Eigenvalues of a covariance depend on the units of its columns, so all three work on the
-// matrix scaled by given standard deviations, D^-1 S D^-1, and scale back. A matrix that is
-// already positive up to rounding comes back from the repair with its bits unchanged.
-// Cost: one symmetric eigen-decomposition, O(P^3). Not handled: non-finite entries.
+// Eigenvalues of a covariance depend on the units of its columns, so all three work on
+// the matrix scaled by given standard deviations, D^-1 S D^-1, and scale back. A matrix
+// that is already positive up to rounding comes back from the repair with its bits
+// unchanged. Cost: one symmetric eigen-decomposition, O(P^3). Not handled: non-finite
+// entries.
 #pragma once
 
 #include "../base.hpp"
@@ -15,8 +16,8 @@
 namespace lambdabar {
 
 struct PositiveRepair {
-  Matrix value;                // P x P
-  double min_eigen_relative;   // of the scaled input: smallest over largest modulus
+  Matrix value;               // P x P
+  double min_eigen_relative;  // of the scaled input: smallest over largest modulus
   Index n_clipped;
 };
 
@@ -28,9 +29,10 @@ struct GeneralisedInverse {
   Vector scale;               // P, the scaling used
 };
 
-// An eigenvalue of the unit-diagonal matrix below this share of the largest counts as zero
-// in a generalised inverse: about the square root of double precision, since a covariance
-// of rank r holds its zero eigenvalues only up to rounding in its largest ones.
+// An eigenvalue of the unit-diagonal matrix below this share of the largest counts as
+// zero in a generalised inverse: about the square root of double precision, since a
+// covariance of rank r holds its zero eigenvalues only up to rounding in its largest
+// ones.
 inline constexpr double kInverseTolerance = 1e-9;
 
 namespace detail {
@@ -72,8 +74,8 @@ inline PositiveRepair make_positive(const Matrix& S, const Vector& scale) {
   const Vector& values = eigen.eigenvalues();
   const double relative = detail::smallest_over_largest(values);
   if (relative >= detail::rounding_floor(S.rows())) return {S, relative, 0};
-  const Matrix root =
-      d.asDiagonal() * eigen.eigenvectors() * values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
+  const Matrix root = d.asDiagonal() * eigen.eigenvectors() *
+                      values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
   Matrix repaired = Matrix::Zero(S.rows(), S.cols());
   repaired.selfadjointView<Eigen::Lower>().rankUpdate(root);
   repaired.triangularView<Eigen::StrictlyUpper>() = repaired.transpose();
@@ -81,8 +83,8 @@ inline PositiveRepair make_positive(const Matrix& S, const Vector& scale) {
 }
 
 // Inverse on the span of the eigenvectors whose eigenvalue exceeds
-// tolerance x the largest, in units where the diagonal is one. Eigenvalues at or below it,
-// negative ones too, are left out and reduce the rank.
+// tolerance x the largest, in units where the diagonal is one. Eigenvalues at or below
+// it, negative ones too, are left out and reduce the rank.
 inline GeneralisedInverse generalised_inverse(const Matrix& S,
                                               double tolerance = kInverseTolerance) {
   const Index size = S.rows();
@@ -94,10 +96,14 @@ inline GeneralisedInverse generalised_inverse(const Matrix& S,
   const Index n_dropped = (values.array() <= floor).count();
   const Index rank = size - n_dropped;
   // Eigenvalues come in increasing order: the kept ones are the last.
-  const Matrix root = d.cwiseInverse().asDiagonal() * eigen.eigenvectors().rightCols(rank) *
+  const Matrix root = d.cwiseInverse().asDiagonal() *
+                      eigen.eigenvectors().rightCols(rank) *
                       values.tail(rank).cwiseSqrt().cwiseInverse().asDiagonal();
-  return {root * root.transpose(), rank, detail::smallest_over_largest(values),
-          eigen.eigenvectors().leftCols(n_dropped), d};
+  return {root * root.transpose(),
+          rank,
+          detail::smallest_over_largest(values),
+          eigen.eigenvectors().leftCols(n_dropped),
+          d};
 }
 
 }  // namespace lambdabar

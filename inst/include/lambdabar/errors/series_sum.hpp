@@ -2,18 +2,18 @@
 //   S = sum_t h_t h_t' + sum_{j>=1} k(j / divisor) sum_t (h_t h_{t-j}' + h_{t-j} h_t')
 //
 // rows h: T x P, the 1/T already inside, so S is a covariance before any small-sample
-// factor. slot: calendar position of each row, increasing; a missing slot is a zero row, so
-// lags count calendar time. Data-driven lags and prewhitening need equal spacing: they work
-// on the rows as they stand and report `closed_gaps`.
+// factor. slot: calendar position of each row, increasing; a missing slot is a zero row,
+// so lags count calendar time. Data-driven lags and prewhitening need equal spacing: they
+// work on the rows as they stand and report `closed_gaps`.
 //
-// Prewhitening (Andrews and Monahan 1992): VAR(1) without constant, h_t = Phi h_{t-1} + v_t,
-// kernel sum S_v on v, S = (I - Phi)^-1 S_v (I - Phi)^-T. If an eigenvalue of Phi has a
-// modulus above 0.97, its singular values are capped at 0.97, in columns scaled to unit
-// norm so that units do not matter (a choice).
+// Prewhitening (Andrews and Monahan 1992): VAR(1) without constant, h_t = Phi h_{t-1} +
+// v_t, kernel sum S_v on v, S = (I - Phi)^-1 S_v (I - Phi)^-T. If an eigenvalue of Phi
+// has a modulus above 0.97, its singular values are capped at 0.97, in columns scaled to
+// unit norm so that units do not matter (a choice).
 //
-// Without lags S is `outer_sum(rows)` to the last bit. With the truncated kernel S may have
-// negative eigenvalues; they are reported, never clipped.
-// Cost O(T L P + T P^2); memory O(T P).
+// Without lags S is `outer_sum(rows)` to the last bit. With the truncated kernel S may
+// have negative eigenvalues; they are reported, never clipped. Cost O(T L P + T P^2);
+// memory O(T P).
 #pragma once
 
 #include "bandwidth.hpp"
@@ -52,12 +52,14 @@ inline std::vector<Index> consecutive(Index n) {
 
 inline void check_slots(const std::vector<Index>& slot, Index n_rows) {
   if (static_cast<Index>(slot.size()) != n_rows)
-    throw Error("input", "One calendar slot is needed for each row.",
+    throw Error("input",
+                "One calendar slot is needed for each row.",
                 {{"n_rows", static_cast<double>(n_rows)},
                  {"n_slots", static_cast<double>(slot.size())}});
   for (std::size_t t = 1; t < slot.size(); ++t)
     if (slot[t] <= slot[t - 1])
-      throw Error("input", "Calendar slots must increase.",
+      throw Error("input",
+                  "Calendar slots must increase.",
                   {{"row", static_cast<double>(t + 1)}});
 }
 
@@ -67,8 +69,9 @@ inline Index span_of(const std::vector<Index>& slot) {
 
 // Weights of lags 0 .. the last that counts, none beyond `longest`.
 inline std::vector<double> lag_weights(Kernel kernel, double divisor, Index longest) {
-  const double reach = kernel == Kernel::qs ? static_cast<double>(longest)
-                                            : std::min(divisor, static_cast<double>(longest));
+  const double reach = kernel == Kernel::qs
+                           ? static_cast<double>(longest)
+                           : std::min(divisor, static_cast<double>(longest));
   std::vector<double> weights{1.0};
   for (Index j = 1; static_cast<double>(j) <= reach; ++j)
     weights.push_back(kernel_weight(kernel, static_cast<double>(j) / divisor));
@@ -106,9 +109,10 @@ struct Prewhitened {
 inline Prewhitened prewhiten(const Matrix& rows) {
   const Index n = rows.rows(), size = rows.cols();
   if (n - 1 <= size)
-    throw Error("too_few", "Too few periods to prewhiten.",
-                {{"n_periods", static_cast<double>(n)},
-                 {"n_terms", static_cast<double>(size)}});
+    throw Error(
+        "too_few",
+        "Too few periods to prewhiten.",
+        {{"n_periods", static_cast<double>(n)}, {"n_terms", static_cast<double>(size)}});
   const Vector scale = usable_scale(rows.colwise().norm().transpose());
   const Matrix scaled = rows * scale.cwiseInverse().asDiagonal();
   const auto lag = scaled.topRows(n - 1);
@@ -129,8 +133,8 @@ inline Prewhitened prewhiten(const Matrix& rows) {
   return result;
 }
 
-// rule_map: P x R; a data-driven rule sees rows * rule_map with R weights. Empty: the rows.
-// It lets a sum over rotated rows take its lags from the columns they came from.
+// rule_map: P x R; a data-driven rule sees rows * rule_map with R weights. Empty: the
+// rows. It lets a sum over rotated rows take its lags from the columns they came from.
 inline SeriesSum sum_series_by(const Matrix& rows,
                                const std::vector<Index>& slot_or_none,
                                const Matrix& rule_map,
@@ -145,8 +149,7 @@ inline SeriesSum sum_series_by(const Matrix& rows,
   Prewhitened white;
   if (options.prewhiten) white = prewhiten(rows);
   const Matrix& series = options.prewhiten ? white.residuals : rows;
-  const std::vector<Index> slot =
-      options.prewhiten ? consecutive(series.rows()) : given;
+  const std::vector<Index> slot = options.prewhiten ? consecutive(series.rows()) : given;
   const Bandwidth chosen =
       automatic && rule_map.size() > 0
           ? choose_bandwidth(

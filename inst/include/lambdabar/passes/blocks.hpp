@@ -1,10 +1,11 @@
 // Rows of a design, a block at a time, packed for arithmetic.
 //
 // A block holds up to kBlockRows consecutive rows of y and every x (column 0 is y), less
-// a shift per column, in column-major memory of its own. Incomplete rows are taken out and
-// named. The design must outlive the block. Cost: one read of the columns; a block whose
-// sums are all finite needs no look at single rows, because a sum is non-finite whenever a
-// value is. (It may also overflow from finite values; the look at the rows then decides.)
+// a shift per column, in column-major memory of its own. Incomplete rows are taken out
+// and named. The design must outlive the block. Cost: one read of the columns; a block
+// whose sums are all finite needs no look at single rows, because a sum is non-finite
+// whenever a value is. (It may also overflow from finite values; the look at the rows
+// then decides.)
 #pragma once
 
 #include "../panel/design.hpp"
@@ -17,8 +18,8 @@ namespace detail {
 
 // Long runs of one column keep the memory system streaming.
 inline constexpr Index kBlockRows = 2048;
-// Columns start 2112 bytes apart modulo a page, so that a tile of a dozen columns does not
-// fall into the same few cache sets; the slack also holds the rows of zero padding.
+// Columns start 2112 bytes apart modulo a page, so that a tile of a dozen columns does
+// not fall into the same few cache sets; the slack also holds the rows of zero padding.
 inline constexpr Index kBlockStride = kBlockRows + 264;
 inline constexpr Index kRowPadding = 4;
 

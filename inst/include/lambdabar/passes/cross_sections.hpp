@@ -11,7 +11,8 @@
 // Shapes: T periods, P terms (the constant first). Cost: one read of the columns, see
 // moments.hpp, plus T P^3; rows are read again only for periods that go back to them, or
 // whose shift lay far out. Same bits for any number of threads.
-// Not handled: no terms at all. R2 is NaN where y does not vary.
+// Not handled: no terms at all; columns whose squares underflow (values near 1e-160), which
+// read as without variation. R2 is NaN where y does not vary.
 #pragma once
 
 #include "least_squares.hpp"
@@ -33,8 +34,8 @@ struct CrossSections {
   std::vector<Index> n_rows;         // T
   std::vector<Index> n_used;         // T, complete rows
   std::vector<PeriodStatus> status;  // T
-  // T: the term that has no variation (the first such) or lies in the span of terms before
-  // it (the last such); 0 is the constant if there is one; -1 otherwise.
+  // T: the term that has no variation (the first such) or lies in the span of terms
+  // before it (the last such); 0 is the constant if there is one; -1 otherwise.
   std::vector<Index> culprit;
   // n_variables() x T: incomplete rows by the first offending variable in the order y,
   // x, weight. A zero weight counts under weight.

@@ -5,13 +5,13 @@
 // the classical ones, s2 = rss / (T_i - K - 1); resid_var has divisor T_i.
 //
 // Factors are centred on the asset's own sample, scaled to unit norm and factored by a
-// column-pivoted QR, with one step of refinement; no cross-products are formed. Assets that
-// are complete share one factorisation. Cost O(N T K^2), or O(N T K) for complete assets;
-// memory O(N K + T K) a thread, never a copy of the returns.
+// column-pivoted QR, with one step of refinement; no cross-products are formed. Assets
+// that are complete share one factorisation. Cost O(N T K^2), or O(N T K) for complete
+// assets; memory O(N K + T K) a thread, never a copy of the returns.
 //
 // An asset with fewer than min_obs periods, or whose own sample leaves the factors
-// collinear, gets NaN and a status. Factors that are constant or collinear over all periods
-// are errors. Not handled: missing factors, weights.
+// collinear, gets NaN and a status. Factors that are constant or collinear over all
+// periods are errors. Not handled: missing factors, weights.
 #pragma once
 
 #include "../base.hpp"
@@ -60,7 +60,7 @@ struct FactorBasis {
   Matrix Q;     // T x K, orthonormal
   Matrix C;     // K x K
   Index rank = 0;
-  Index constant = -1;  // first factor without variation
+  Index constant = -1;    // first factor without variation
   Index last_pivot = -1;  // a factor in the span of the others when rank < K
 
   bool usable() const { return constant < 0 && rank == D.cols(); }
@@ -121,7 +121,7 @@ inline AssetFit fit_asset(const FactorBasis& basis, const Vector& returns) {
 struct AssetSample {
   std::vector<Index> period;
   Vector returns;
-  FactorBasis own;              // used when the asset has holes
+  FactorBasis own;  // used when the asset has holes
   const FactorBasis* basis = nullptr;
 };
 
@@ -157,10 +157,12 @@ inline void read_asset(const Eigen::Ref<const Matrix>& returns,
 
 inline void check_factors(const FactorBasis& basis) {
   if (basis.constant >= 0)
-    throw Error("constant_factor", "A factor does not vary over time.",
+    throw Error("constant_factor",
+                "A factor does not vary over time.",
                 {{"factor", static_cast<double>(basis.constant + 1)}});
   if (!basis.usable())
-    throw Error("rank", "The factors are collinear over time.",
+    throw Error("rank",
+                "The factors are collinear over time.",
                 {{"rank", static_cast<double>(basis.rank)},
                  {"n_factors", static_cast<double>(basis.D.cols())},
                  {"factor", static_cast<double>(basis.last_pivot + 1)}});
@@ -169,7 +171,8 @@ inline void check_factors(const FactorBasis& basis) {
 inline void check_panel(const Eigen::Ref<const Matrix>& returns,
                         const Eigen::Ref<const Matrix>& factors) {
   if (returns.rows() != factors.rows() || returns.cols() == 0 || factors.cols() == 0)
-    throw Error("input", "Returns and factors need one row a period and a column at least.",
+    throw Error("input",
+                "Returns and factors need one row a period and a column at least.",
                 {{"n_periods_returns", static_cast<double>(returns.rows())},
                  {"n_periods_factors", static_cast<double>(factors.rows())},
                  {"n_assets", static_cast<double>(returns.cols())},
@@ -177,7 +180,8 @@ inline void check_panel(const Eigen::Ref<const Matrix>& returns,
   for (Index k = 0; k < factors.cols(); ++k)
     for (Index t = 0; t < factors.rows(); ++t)
       if (!std::isfinite(factors(t, k)))
-        throw Error("input", "Factors must be complete.",
+        throw Error("input",
+                    "Factors must be complete.",
                     {{"factor", static_cast<double>(k + 1)},
                      {"row", static_cast<double>(t + 1)}});
 }
@@ -257,7 +261,8 @@ inline FactorBasis checked_basis(const Eigen::Ref<const Matrix>& returns,
                                  const Eigen::Ref<const Matrix>& factors) {
   check_panel(returns, factors);
   if (factors.rows() < applied_min_obs(0, factors.cols()))
-    throw Error("too_few", "Too few periods for a time-series regression.",
+    throw Error("too_few",
+                "Too few periods for a time-series regression.",
                 {{"n_periods", static_cast<double>(factors.rows())},
                  {"n_factors", static_cast<double>(factors.cols())}});
   FactorBasis basis = factor_basis(factors);
@@ -267,7 +272,8 @@ inline FactorBasis checked_basis(const Eigen::Ref<const Matrix>& returns,
 
 }  // namespace detail
 
-// min_obs: fewest periods a beta may rest on; never below K + 2, which is also the default.
+// min_obs: fewest periods a beta may rest on; never below K + 2, which is also the
+// default.
 inline FirstPass first_pass(const Eigen::Ref<const Matrix>& returns,
                             const Eigen::Ref<const Matrix>& factors,
                             Index min_obs = 0,

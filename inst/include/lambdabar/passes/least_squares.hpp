@@ -4,8 +4,8 @@
 //
 // Two routes give the same struct. From moments: centred cross-products scaled to unit
 // diagonal, Cholesky. Normal equations lose twice the digits an orthogonal factorisation
-// loses, so this route judges itself and says `trusted = false` when more than about three
-// digits are gone; the caller then takes the second route. From rows: Householder
+// loses, so this route judges itself and says `trusted = false` when more than about
+// three digits are gone; the caller then takes the second route. From rows: Householder
 // reflections in extended precision, a block of rows at a time, leave one triangle of
 // (P + 1)^2 numbers, so nothing of the size of the data is kept. Extended precision does
 // the work of iterative refinement and needs no second pass; where `long double` is no
@@ -51,8 +51,12 @@ namespace detail {
 
 // 1 / VIF and shares of this size cost three digits.
 inline constexpr double kTrust = 1e-3;
-// Rounding of stored data is half an epsilon an operation; sixteen halvings of slack cover
-// columns that were themselves computed in a few operations.
+// A constant that is what large parts leave over loses digits too, without harm to the
+// slopes. Rows are read again for it only where there are few, as in certified sets; in
+// large samples its standard error is many orders above that rounding.
+inline constexpr Index kExactConstantRows = 1000;
+// Rounding of stored data is half an epsilon an operation; sixteen halvings of slack
+// cover columns that were themselves computed in a few operations.
 inline constexpr double kRankTolerance = 16 * DBL_EPSILON;
 
 using Extended = long double;
@@ -78,9 +82,9 @@ M bread_of(M whiten, bool intercept, const V& centre) {
 }
 
 struct NormalEquations {
-  Vector mean;    // 1 + k
-  Matrix xx;      // k x k
-  Vector xy;      // k
+  Vector mean;  // 1 + k
+  Matrix xx;    // k x k
+  Vector xy;    // k
   double yy = 0;
 };
 
@@ -114,9 +118,12 @@ inline Matrix whiten_with_constant(const Matrix& slopes,
   return whiten;
 }
 
-inline bool keeps_digits(const LeastSquares& fit, const Vector& mean, bool intercept) {
+inline bool keeps_digits(const LeastSquares& fit,
+                         const Vector& mean,
+                         bool intercept,
+                         Index n_used) {
   if (!(fit.rss >= kTrust * fit.tss)) return false;
-  if (!intercept) return true;
+  if (!intercept || n_used > kExactConstantRows) return true;
   const Index k = mean.size() - 1;
   const double parts =
       std::abs(mean[0]) + fit.coef.tail(k).cwiseProduct(mean.tail(k)).cwiseAbs().sum();
@@ -155,7 +162,8 @@ inline LeastSquares solve_moments(const Moments& m, Index period, bool intercept
     fit.whiten = whiten_with_constant(slopes, off.tail(k), m.weight[period]);
   }
   fit.bread = bread_of(fit.whiten, intercept, e.mean.tail(k));
-  fit.trusted = keeps_digits(fit, e.mean, intercept) && fit.coef.allFinite();
+  const Index n_used = m.n_used[static_cast<std::size_t>(period)];
+  fit.trusted = keeps_digits(fit, e.mean, intercept, n_used) && fit.coef.allFinite();
   return fit;
 }
 

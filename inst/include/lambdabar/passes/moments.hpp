@@ -1,4 +1,5 @@
-// Moments of every period's cross-section: the small symmetric matrix that all else needs.
+// Moments of every period's cross-section: the small symmetric matrix that all else
+// needs.
 //
 //   W = sum w,   m = sum w z / W,   S = sum w (z - m)(z - m)',   z = (y, x_1 .. x_k)
 //
@@ -27,15 +28,15 @@
 namespace lambdabar {
 
 struct Moments {
-  Index n_variables = 0;         // q, y first
-  std::vector<Index> n_rows;     // T
-  std::vector<Index> n_used;     // T, complete rows
+  Index n_variables = 0;                                         // q, y first
+  std::vector<Index> n_rows;                                     // T
+  std::vector<Index> n_used;                                     // T, complete rows
   Eigen::Matrix<Index, Eigen::Dynamic, Eigen::Dynamic> missing;  // n_variables() x T
-  Vector weight;                 // T
-  Matrix shift;                  // q x T
-  Matrix offset;                 // q x T; mean = shift + offset
-  Matrix cross;                  // q (q + 1) / 2 x T, centred
-  bool in_order = true;          // rows came in non-decreasing period order
+  Vector weight;                                                 // T
+  Matrix shift;                                                  // q x T
+  Matrix offset;         // q x T; mean = shift + offset
+  Matrix cross;          // q (q + 1) / 2 x T, centred
+  bool in_order = true;  // rows came in non-decreasing period order
 
   static Index slot(Index i, Index j) { return i * (i + 1) / 2 + j; }  // i >= j
   Index n_periods() const { return weight.size(); }
@@ -107,11 +108,8 @@ struct MomentPass {
 };
 
 // Dot products of three columns with three columns, added to out (row by row, ld apart).
-inline void add_dots_3x3(const double* a,
-                         const double* b,
-                         Index n,
-                         double* out,
-                         Index ld) {
+inline void add_dots_3x3(
+    const double* a, const double* b, Index n, double* out, Index ld) {
   const double *a1 = a + kBlockStride, *a2 = a1 + kBlockStride;
   const double *b1 = b + kBlockStride, *b2 = b1 + kBlockStride;
   Lanes s00 = {0, 0}, s01 = s00, s02 = s00, s10 = s00, s11 = s00, s12 = s00;
@@ -133,7 +131,8 @@ inline void add_dots_3x3(const double* a,
   }
   const Lanes all[9] = {s00, s01, s02, s10, s11, s12, s20, s21, s22};
   for (Index r = 0; r < 3; ++r) {
-    for (Index c = 0; c < 3; ++c) out[r * ld + c] += all[3 * r + c][0] + all[3 * r + c][1];
+    for (Index c = 0; c < 3; ++c)
+      out[r * ld + c] += all[3 * r + c][0] + all[3 * r + c][1];
   }
 }
 
@@ -176,15 +175,26 @@ inline void add_cross_products(const RowBlock& block, std::vector<double>& cross
   }
 }
 
-// Adds v v' w to a period's tiles; v and wv hold `half` pairs.
-inline void add_rank_one(const double* v, const double* wv, Index half, double* sums) {
-  for (Index a = 0; a < half; ++a) {
-    const Lanes upper = {wv[2 * a], wv[2 * a]};
-    const Lanes lower = {wv[2 * a + 1], wv[2 * a + 1]};
-    for (Index b = 0; b <= a; ++b, sums += 4) {
-      const Lanes pair = load_lanes(v + 2 * b);
-      store_lanes(sums, load_lanes(sums) + upper * pair);
-      store_lanes(sums + 2, load_lanes(sums + 2) + lower * pair);
+// Adds w v v' of kTogether rows to a period's tiles; each v and wv holds `half` pairs,
+// the rows one after the other. Together they share the loads and stores of the sums.
+inline constexpr Index kTogether = 4;
+
+inline void add_rows(const double* v, const double* wv, Index half, double* sums) {
+  const Index size = 2 * half;
+  const double *v1 = v + size, *v2 = v1 + size, *v3 = v2 + size;
+  const double *wv1 = wv + size, *wv2 = wv1 + size, *wv3 = wv2 + size;
+  for (Index a = 0; a < size; a += 2) {
+    const Lanes upper0 = {wv[a], wv[a]}, lower0 = {wv[a + 1], wv[a + 1]};
+    const Lanes upper1 = {wv1[a], wv1[a]}, lower1 = {wv1[a + 1], wv1[a + 1]};
+    const Lanes upper2 = {wv2[a], wv2[a]}, lower2 = {wv2[a + 1], wv2[a + 1]};
+    const Lanes upper3 = {wv3[a], wv3[a]}, lower3 = {wv3[a + 1], wv3[a + 1]};
+    for (Index b = 0; b <= a; b += 2, sums += 4) {
+      const Lanes p0 = load_lanes(v + b), p1 = load_lanes(v1 + b);
+      const Lanes p2 = load_lanes(v2 + b), p3 = load_lanes(v3 + b);
+      const Lanes upper = (upper0 * p0 + upper1 * p1) + (upper2 * p2 + upper3 * p3);
+      const Lanes lower = (lower0 * p0 + lower1 * p1) + (lower2 * p2 + lower3 * p3);
+      store_lanes(sums, load_lanes(sums) + upper);
+      store_lanes(sums + 2, load_lanes(sums + 2) + lower);
     }
   }
 }
@@ -286,64 +296,135 @@ inline MomentTable sum_runs(const MomentPass& pass, Index begin, Index end) {
   return table;
 }
 
-// Rows in any order, each added to its period's entry.
+// Rows in any order. A slab of rows is turned row by row and threaded into one list a
+// period, so that a period's entry is fetched once for all its rows in the slab.
 class RowScatterer {
  public:
   RowScatterer(const MomentPass& pass, MomentTable& table)
       : pass_(pass),
         table_(table),
         size_(2 * table.half),
-        block_(*pass.design),
+        block_(*pass.design, size_),
         zero_(static_cast<std::size_t>(table.n_variables), 0.0),
-        turned_(static_cast<std::size_t>(size_ * kTurnRows), 0.0),
-        v_(static_cast<std::size_t>(size_), 0.0),
-        wv_(static_cast<std::size_t>(size_), 0.0) {
-    for (Index i = 0; i < kTurnRows; ++i) turned_[static_cast<std::size_t>(i * size_)] = 1;
+        ones_(kBlockRows + kRowPadding, 1.0),
+        slab_(static_cast<std::size_t>(size_ * (kSlabRows + 1)), 0.0),
+        weight_(kSlabRows, 1.0),
+        period_(kSlabRows),
+        next_(kSlabRows),
+        head_(static_cast<std::size_t>(table.n_periods), kNone),
+        v_(static_cast<std::size_t>(kTogether * size_), 0.0),
+        wv_(static_cast<std::size_t>(kTogether * size_), 0.0) {
+    touched_.reserve(kSlabRows);
   }
 
   void add(Index begin, Index end) {
+    Index filled = 0;
     for (Index row = begin; row < end; row += kBlockRows) {
       block_.load(row, std::min(kBlockRows, end - row), zero_.data());
       count_incomplete(pass_, block_, table_);
-      for (Index i = 0; i < block_.n_used(); i += kTurnRows) {
-        const Index n = std::min(kTurnRows, block_.n_used() - i);
-        turn(i, n);
-        for (Index k = 0; k < n; ++k) add_row(i + k, turned_.data() + k * size_);
+      if (filled + block_.n_used() > kSlabRows) {
+        add_slab(filled);
+        filled = 0;
       }
+      filled = append(filled);
     }
+    add_slab(filled);
   }
 
   Index negative_row() const { return block_.negative_row(); }
 
  private:
+  static constexpr Index kSlabRows = 4 * kBlockRows;
   static constexpr Index kTurnRows = 128;
+  static constexpr int kNone = -1;
 
-  // Rows i .. i + n - 1 of the block, row by row behind a one.
-  void turn(Index i, Index n) {
-    for (Index j = 0; j < table_.n_variables; ++j) {
-      const double* from = block_.column(j) + i;
-      double* to = turned_.data() + j + 1;
-      for (Index k = 0; k < n; ++k) to[k * size_] = from[k];
+  // The block's rows, one after the other, each behind a one.
+  Index append(Index filled) {
+    const Index n = block_.n_used();
+    for (Index i = 0; i < n; i += kTurnRows) {
+      const Index stop = std::min(n, i + kTurnRows);
+      for (Index j = 0; j < size_; j += 2) {
+        turn_pair(j == 0 ? ones_.data() : block_.column(j - 1),
+                  block_.column(j),
+                  i,
+                  stop,
+                  slab_.data() + filled * size_ + j);
+      }
+    }
+    for (Index i = 0; i < n; ++i) {
+      const std::size_t at = static_cast<std::size_t>(filled + i);
+      period_[at] = pass_.period_of(block_.row(i));
+      weight_[at] = block_.weight(i);
+    }
+    return filled + n;
+  }
+
+  // Rows i .. stop - 1 of two columns, side by side. An odd end turns a row of padding.
+  void turn_pair(
+      const double* a, const double* b, Index i, Index stop, double* to) const {
+    for (; i < stop; i += 2) {
+      const Lanes left = load_lanes(a + i), right = load_lanes(b + i);
+      store_lanes(to + i * size_, Lanes{left[0], right[0]});
+      store_lanes(to + (i + 1) * size_, Lanes{left[1], right[1]});
     }
   }
 
-  void add_row(Index i, const double* row) {
-    const Index p = pass_.period_of(block_.row(i));
-    if (!pass_.wants(p)) return;
+  void add_slab(Index n) {
+    touched_.clear();
+    // From the back, so that each list runs forward.
+    for (Index i = n - 1; i >= 0; --i) {
+      const Index p = period_[static_cast<std::size_t>(i)];
+      if (!pass_.wants(p)) continue;
+      int& head = head_[static_cast<std::size_t>(p - table_.first_period)];
+      if (head == kNone) touched_.push_back(p);
+      next_[static_cast<std::size_t>(i)] = head;
+      head = static_cast<int>(i);
+    }
+    // In period order the table is walked straight through; worth it unless most of it
+    // has no row in the slab.
+    if (table_.n_periods <= kSlabRows) {
+      for (Index p = 0; p < table_.n_periods; ++p) {
+        if (head_[static_cast<std::size_t>(p)] != kNone) add_list(p);
+      }
+    } else {
+      for (const Index p : touched_) add_list(p);
+    }
+  }
+
+  void add_list(Index p) {
+    int& head = head_[static_cast<std::size_t>(p - table_.first_period)];
+    Index& used = table_.used[static_cast<std::size_t>(p - table_.first_period)];
     double* shift = table_.shift_of(p);
-    if (table_.used[static_cast<std::size_t>(p - table_.first_period)]++ == 0) {
-      settle_shift(p, row, shift);
+    double* sums = table_.sums_of(p);
+    if (used == 0) settle_shift(p, slab_.data() + head * size_, shift);
+    while (head != kNone) {
+      for (Index k = 0; k < kTogether; ++k) {
+        if (head != kNone) {
+          ++used;
+          head = prepare(head, shift, k * size_);
+        } else {
+          std::fill_n(v_.begin() + k * size_, size_, 0.0);
+          std::fill_n(wv_.begin() + k * size_, size_, 0.0);
+        }
+      }
+      const double* wv = block_.weighted() ? wv_.data() : v_.data();
+      add_rows(v_.data(), wv, table_.half, sums);
     }
+  }
+
+  // Shifts a row of the slab into place `to`; returns the next row of its period.
+  int prepare(int i, const double* shift, Index to) {
+    const double* row = slab_.data() + i * size_;
+    double* v = v_.data() + to;
     for (Index k = 0; k < size_; k += 2) {
-      store_lanes(v_.data() + k, load_lanes(row + k) - load_lanes(shift + k));
+      store_lanes(v + k, load_lanes(row + k) - load_lanes(shift + k));
     }
-    const double* wv = v_.data();
     if (block_.weighted()) {
-      const double w = block_.weight(i);
-      for (Index k = 0; k < size_; ++k) wv_[k] = w * v_[k];
-      wv = wv_.data();
+      const double w = weight_[static_cast<std::size_t>(i)];
+      double* wv = wv_.data() + to;
+      for (Index k = 0; k < size_; ++k) wv[k] = w * v[k];
     }
-    add_rank_one(v_.data(), wv, table_.half, table_.sums_of(p));
+    return next_[static_cast<std::size_t>(i)];
   }
 
   void settle_shift(Index period, const double* row, double* shift) {
@@ -354,9 +435,14 @@ class RowScatterer {
 
   const MomentPass& pass_;
   MomentTable& table_;
-  Index size_;
+  Index size_;  // of a row behind its one, made even
   RowBlock block_;
-  std::vector<double> zero_, turned_, v_, wv_;
+  std::vector<double> zero_, ones_, slab_, weight_;
+  std::vector<Index> period_;  // of the slab's rows
+  std::vector<int> next_;      // row of the slab, same period
+  std::vector<int> head_;      // first row of the slab, a period
+  std::vector<Index> touched_;
+  std::vector<double> v_, wv_;  // kTogether rows
 };
 
 inline MomentTable scatter_rows(const MomentPass& pass, Index begin, Index end) {
@@ -463,7 +549,8 @@ class MomentMerger {
     const double total = before + weight;
     for (Index j = 0; j < q; ++j) {
       offset_[j] = sums[MomentTable::slot(j + 1, 0)] / weight;
-      delta_[j] = (shift[j] - moments_.shift(j, p)) + (offset_[j] - moments_.offset(j, p));
+      delta_[j] =
+          (shift[j] - moments_.shift(j, p)) + (offset_[j] - moments_.offset(j, p));
     }
     const double joint = before * (weight / total);
     for (Index i = 0; i < q; ++i) {

@@ -4,12 +4,13 @@
 //
 // The panel is treated as a single period: moments in fixed chunks, and, when those are
 // too ill-conditioned, a second pass that folds the rows into one triangle a chunk.
-// Terms in the span of earlier ones (left to right) are aliased: NaN, left out of `bread`.
+// Terms in the span of earlier ones (left to right) are aliased: NaN, left out of
+// `bread`.
 //
-// Shapes: n_rows rows, P terms (the constant first), rank r. Cost: one read of the columns
-// and n P^2 / 2; from rows 2 n P^2 more in extended precision. Same bits for any number of
-// threads. Throws Error "input" (no terms, a negative weight) and "too_few_rows" (no
-// residual degree of freedom). Not handled: absorbed effects.
+// Shapes: n_rows rows, P terms (the constant first), rank r. Cost: one read of the
+// columns and n P^2 / 2; from rows 2 n P^2 more in extended precision. Same bits for any
+// number of threads. Throws Error "input" (no terms, a negative weight) and
+// "too_few_rows" (no residual degree of freedom). Not handled: absorbed effects.
 #pragma once
 
 #include "cross_sections.hpp"
@@ -25,11 +26,11 @@ struct PooledFit {
   Index n_used = 0, n_rows = 0, rank = 0;
   bool from_rows = false;
   std::vector<Index> missing;  // by first offending variable: y, x, weight
-  // The same fit around a centre; see LeastSquares. Residuals and influence rows come from
-  // these, because a mean far from zero would cost them digits.
-  Vector centre;     // 1 + number of x
+  // The same fit around a centre; see LeastSquares. Residuals and influence rows come
+  // from these, because a mean far from zero would cost them digits.
+  Vector centre;  // 1 + number of x
   double level = 0;
-  Matrix whiten;     // r x r
+  Matrix whiten;  // r x r
 };
 
 namespace detail {

@@ -16,9 +16,9 @@ enum class Weighting { ols, wls, gls };
 
 namespace detail {
 
-// Exposures are estimates: a spread or a pivot below this share of the column's norm is the
-// first pass's own rounding (epsilon x the condition of the factors, some 1e-12 at worst in
-// samples worth pricing), not a difference between assets.
+// Exposures are estimates: a spread or a pivot below this share of the column's norm is
+// the first pass's own rounding (epsilon x the condition of the factors, some 1e-12 at
+// worst in samples worth pricing), not a difference between assets.
 inline constexpr double kExposureTolerance = 1e-11;
 
 // Upper triangle U of the QR of Y (n x m, n >= m): Y'Y = U'U without forming it.
@@ -44,7 +44,7 @@ struct Projection {
   Matrix slopes;  // C without its first row and column, or C
   double constant_norm2 = 0;  // 1'W1
   Index rank = 0;
-  Index culprit = -1;         // column without spread, or the last one spanned by earlier
+  Index culprit = -1;  // column without spread, or the last one spanned by earlier
   bool no_variation = false;
 
   bool usable() const { return Q.size() > 0; }
@@ -103,8 +103,8 @@ inline Projection project(Matrix X, bool intercept) {
     return out;
   }
   others = others * scale.cwiseInverse().asDiagonal();
-  const double tolerance = std::max(kExposureTolerance,
-                                    pivot_tolerance((raw.array() / scale.array()).maxCoeff()));
+  const double tolerance = std::max(
+      kExposureTolerance, pivot_tolerance((raw.array() / scale.array()).maxCoeff()));
   Eigen::ColPivHouseholderQR<Matrix> qr(others);
   qr.setThreshold(tolerance);
   out.rank = qr.rank() + first;
@@ -130,7 +130,8 @@ inline Projection project(Matrix X, bool intercept) {
 
 // Largest over smallest singular value of X with columns scaled to unit norm.
 inline double scaled_condition(const Projection& projection, const Matrix& X) {
-  const Matrix unit = X * X.colwise().norm().cwiseInverse().asDiagonal();
+  const Vector norm = X.colwise().norm();
+  const Matrix unit = X * norm.cwiseInverse().asDiagonal();
   const Eigen::JacobiSVD<Matrix> svd(projection.Q.transpose() * unit);
   return svd.singularValues()(0) / svd.singularValues()(X.cols() - 1);
 }
@@ -140,7 +141,7 @@ struct PeriodQuality {
   Vector std_error;  // P, classical: s2 = e'We / (n - P)
 };
 
-// coef and y are not needed: all follows from the whitened y and its projection.
+// y is whitened like the design; the coefficients themselves are not needed.
 inline PeriodQuality period_quality(const Projection& projection,
                                     const Vector& y,
                                     bool intercept) {
@@ -154,8 +155,8 @@ inline PeriodQuality period_quality(const Projection& projection,
   if (tss > 0.0) out.r_squared = 1.0 - rss / tss;
   out.std_error = Vector::Constant(n_terms, kNaN);
   if (n > n_terms)
-    out.std_error = projection.C.rowwise().norm() *
-                    std::sqrt(rss / static_cast<double>(n - n_terms));
+    out.std_error =
+        projection.C.rowwise().norm() * std::sqrt(rss / static_cast<double>(n - n_terms));
   return out;
 }
 

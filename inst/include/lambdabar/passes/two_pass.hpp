@@ -1,8 +1,9 @@
 // Two-pass estimate of factor premia: betas over the full sample, one cross-section of
 // returns on betas a period, the average of its coefficients (Fama and MacBeth 1973).
 //
-// A complete panel without traits takes the closed formulas of two_pass_balanced.hpp (OLS,
-// WLS, GLS); holes or traits take two_pass_ragged.hpp (OLS, WLS). Rows of the estimate sum.
+// A complete panel without traits takes the closed formulas of two_pass_balanced.hpp
+// (OLS, WLS, GLS); holes or traits take two_pass_ragged.hpp (OLS, WLS). Rows of the
+// estimate sum.
 //
 // Errors: "input" (shapes, missing factors), "constant_factor", "rank", "too_few",
 // "no_variation", "zero_residual" (WLS), "unsupported" (GLS with holes or traits; Shanken
@@ -23,7 +24,8 @@ inline void check_traits(const TwoPassData& data) {
   for (std::size_t q = 0; q < data.traits.size(); ++q)
     if (data.traits[q].rows() != data.returns.rows() ||
         data.traits[q].cols() != data.returns.cols())
-      throw Error("input", "A trait must have the shape of the returns.",
+      throw Error("input",
+                  "A trait must have the shape of the returns.",
                   {{"trait", static_cast<double>(q + 1)}});
 }
 
@@ -37,22 +39,25 @@ inline void require_balanced(const TwoPass& fit) {
 inline TwoPass two_pass(const TwoPassData& data, const TwoPassOptions& options) {
   const detail::FactorBasis basis = detail::checked_basis(data.returns, data.factors);
   detail::check_traits(data);
-  FirstPass first = detail::first_pass_on(
-      basis, data.returns, data.factors,
-      detail::applied_min_obs(options.min_obs, data.factors.cols()), options.threads);
-  const bool complete =
-      std::all_of(first.n_obs.begin(), first.n_obs.end(),
-                  [&](Index n) { return n == data.returns.rows(); }) &&
-      first.min_obs <= data.returns.rows();
+  FirstPass first =
+      detail::first_pass_on(basis,
+                            data.returns,
+                            data.factors,
+                            detail::applied_min_obs(options.min_obs, data.factors.cols()),
+                            options.threads);
+  const bool complete = std::all_of(first.n_obs.begin(),
+                                    first.n_obs.end(),
+                                    [&](Index n) { return n == data.returns.rows(); }) &&
+                        first.min_obs <= data.returns.rows();
   if (complete && data.traits.empty())
     return detail::balanced_two_pass(data, options, basis, std::move(first));
   return detail::ragged_two_pass(data, options, basis, std::move(first));
 }
 
-// The closed form of Shanken (1992): ((1 + c) A Sigma A' + Df LRV_f Df') / T, where Df puts
-// the factors' long-run covariance (under `factor_series`) into their own block. c rests on
-// their contemporaneous covariance and on the factors' premia alone. Before any small-sample
-// factor. slot empty: consecutive periods.
+// The closed form of Shanken (1992): ((1 + c) A Sigma A' + Df LRV_f Df') / T, where Df
+// puts the factors' long-run covariance (under `factor_series`) into their own block. c
+// rests on their contemporaneous covariance and on the factors' premia alone. Before any
+// small-sample factor. slot empty: consecutive periods.
 inline Matrix shanken(const TwoPass& fit,
                       const SeriesOptions& factor_series,
                       const std::vector<Index>& slot = {}) {

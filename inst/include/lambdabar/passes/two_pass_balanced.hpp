@@ -43,13 +43,15 @@ struct Whitening {
 inline Whitening gls_whitening(const Eigen::Ref<const Matrix>& returns) {
   const Index n_periods = returns.rows(), n_assets = returns.cols();
   if (n_periods - 1 < n_assets)
-    throw Error("too_few", "GLS needs more periods than assets.",
+    throw Error("too_few",
+                "GLS needs more periods than assets.",
                 {{"n_periods", static_cast<double>(n_periods)},
                  {"n_assets", static_cast<double>(n_assets)}});
   const Vector mean = returns.colwise().mean();
   Triangle triangle = upper_triangle(returns.rowwise() - mean.transpose());
   if (triangle.spanned >= 0)
-    throw Error("rank", "The covariance of the returns is singular.",
+    throw Error("rank",
+                "The covariance of the returns is singular.",
                 {{"asset", static_cast<double>(triangle.spanned + 1)}});
   Whitening out;
   out.kind = Weighting::gls;
@@ -64,8 +66,7 @@ inline Whitening make_whitening(const TwoPassData& data,
   if (options.weighting == Weighting::gls) return gls_whitening(data.returns);
   Whitening out;
   out.kind = options.weighting;
-  if (options.weighting == Weighting::wls)
-    out.root = asset_weights(first).cwiseSqrt();
+  if (options.weighting == Weighting::wls) out.root = asset_weights(first).cwiseSqrt();
   return out;
 }
 
@@ -80,7 +81,8 @@ inline Matrix exposures_with_constant(const FirstPass& first, bool intercept) {
 inline Projection project_exposures(const Matrix& whitened, bool intercept) {
   Projection projection = project(whitened, intercept);
   if (!projection.usable())
-    throw Error("rank", "The betas do not identify the premia.",
+    throw Error("rank",
+                "The betas do not identify the premia.",
                 {{"rank", static_cast<double>(projection.rank)},
                  {"n_terms", static_cast<double>(whitened.cols())},
                  {"term", static_cast<double>(projection.culprit + 1)},
@@ -157,7 +159,8 @@ inline void fill_rows(const TwoPassData& data,
   Vector u = data.returns * weighted_alpha;
   u.array() -= u.mean();
   // Vf^-1 d_t = T C Q_t, so the 1/T of a summing row cancels.
-  const Matrix bend = basis.Q * (basis.C.transpose() * out.H.middleRows(first, out.n_factors));
+  const Matrix bend =
+      basis.Q * (basis.C.transpose() * out.H.middleRows(first, out.n_factors));
   out.rows_misspecified = out.rows_estimated + u.asDiagonal() * bend;
   if (out.weighting == Weighting::wls)
     out.rows_misspecified -= squared_residual_term(data, weighted_alpha, out) / n;
@@ -170,7 +173,8 @@ inline void check_n_assets(const TwoPassData& data,
                            Index n_terms) {
   const Index needed = std::max(n_terms, options.min_assets);
   if (data.returns.cols() < needed)
-    throw Error("too_few", "Too few assets for this many premia.",
+    throw Error("too_few",
+                "Too few assets for this many premia.",
                 {{"n_assets", static_cast<double>(data.returns.cols())},
                  {"n_terms", static_cast<double>(n_terms)},
                  {"min_assets", static_cast<double>(needed)}});

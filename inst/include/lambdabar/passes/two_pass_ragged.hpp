@@ -1,5 +1,5 @@
-// Two passes with holes, or with traits beside the betas: one cross-section a period on the
-// assets present, betas from each asset's own T_i periods.
+// Two passes with holes, or with traits beside the betas: one cross-section a period on
+// the assets present, betas from each asset's own T_i periods.
 //   X_s = [1 B Z_s],  W = I or diag(1 / residual variance),  s over the Tu usable periods
 //   H_s = (X_s'W X_s)^-1,  A_s = H_s X_s'W,  gamma_s,  alpha_is = R_is - x_is' gamma_s
 //   G_i = (1/Tu) sum_s A_s[, i] gamma_f,s'          P x K, gamma_f the factors' premia
@@ -9,9 +9,9 @@
 //   estimated     1{t usable} (gamma_t - gamma) / Tu - sum_i e_it G_i (D_i'D_i)^-1 d_it
 //   misspecified  estimated + sum_i e_it L_i (D_i'D_i)^-1 d_it
 //                           - sum_i U_i (e_it^2 - resid_var_i) / T_i
-// Traits are exact, so they enter X_s but no row of their own. The rows are the derivative
-// of the premia in the weights of the periods; without holes and traits they are the closed
-// formulas. They assume that absence is unrelated to returns.
+// Traits are exact, so they enter X_s but no row of their own. The rows are the
+// derivative of the premia in the weights of the periods; without holes and traits they
+// are the closed formulas. They assume that absence is unrelated to returns.
 //
 // Two sweeps over the panel, O(N T P (P + K)) plus one QR a period; memory O(N P + T P)
 // times a fixed number of blocks, no N x N, no T x N. Not handled: GLS.
@@ -27,20 +27,17 @@ struct PeriodFit {
   PeriodStatus status = PeriodStatus::empty;
   Index culprit = -1;
   Index n_assets = 0;
-  Vector premia;     // P
-  Matrix slopes;     // C of the projection without the constant
-  Vector centre;     // as in the projection
+  Vector premia;  // P
+  Matrix slopes;  // C of the projection without the constant
+  Vector centre;  // as in the projection
   double constant_norm2 = 0;
-  Matrix factor_H;   // P x K, columns of H for the factors
+  Matrix factor_H;  // P x K, columns of H for the factors
   PeriodQuality quality;
 };
 
 // Writes x = [b_i z_it] without the constant; false when the asset is absent at t.
-inline bool read_exposures(const TwoPassData& data,
-                           const FirstPass& first,
-                           Index asset,
-                           Index t,
-                           double* x) {
+inline bool read_exposures(
+    const TwoPassData& data, const FirstPass& first, Index asset, Index t, double* x) {
   if (first.status[static_cast<std::size_t>(asset)] != AssetStatus::estimated ||
       !std::isfinite(data.returns(t, asset)))
     return false;
@@ -55,8 +52,8 @@ inline bool read_exposures(const TwoPassData& data,
 }
 
 struct Gathered {
-  Matrix X;        // n x P, whitened
-  Vector y;        // n, whitened
+  Matrix X;  // n x P, whitened
+  Vector y;  // n, whitened
   Index n_assets = 0;
 };
 
@@ -103,7 +100,7 @@ inline PeriodFit fit_section(const Gathered& section,
   if (section.n_assets < min_assets) return fit;
   Projection projection = project(section.X.topRows(section.n_assets), intercept);
   fit.culprit = projection.culprit;
-  fit.status = projection.usable()        ? PeriodStatus::estimated
+  fit.status = projection.usable()       ? PeriodStatus::estimated
                : projection.no_variation ? PeriodStatus::no_variation
                                          : PeriodStatus::rank_deficient;
   if (!projection.usable()) return fit;
@@ -126,12 +123,13 @@ inline std::vector<PeriodFit> fit_periods(const TwoPassData& data,
                                           const Vector& root_weight) {
   const Index n_periods = data.returns.rows();
   const Index n_factors = data.factors.cols();
-  const Index n_terms = n_factors + static_cast<Index>(data.traits.size()) +
-                        (options.intercept ? 1 : 0);
+  const Index n_terms =
+      n_factors + static_cast<Index>(data.traits.size()) + (options.intercept ? 1 : 0);
   const Index min_assets =
       options.min_assets > 0 ? std::max(options.min_assets, n_terms) : n_terms + 1;
   std::vector<PeriodFit> fits(static_cast<std::size_t>(n_periods));
-  for_each_task((n_periods + kPeriodsPerGather - 1) / kPeriodsPerGather, options.threads,
+  for_each_task((n_periods + kPeriodsPerGather - 1) / kPeriodsPerGather,
+                options.threads,
                 [&](Index task) {
                   const Index begin = task * kPeriodsPerGather;
                   const Index count = std::min(kPeriodsPerGather, n_periods - begin);
@@ -140,7 +138,9 @@ inline std::vector<PeriodFit> fit_periods(const TwoPassData& data,
                   for (Index s = 0; s < count; ++s)
                     fits[static_cast<std::size_t>(begin + s)] =
                         fit_section(sections[static_cast<std::size_t>(s)],
-                                    options.intercept, n_factors, min_assets);
+                                    options.intercept,
+                                    n_factors,
+                                    min_assets);
                 });
   return fits;
 }
@@ -149,11 +149,8 @@ inline std::vector<PeriodFit> fit_periods(const TwoPassData& data,
 struct AssetColumn {
   Vector centred, root, step;  // work space
 
-  void compute(const PeriodFit& fit,
-               const double* x,
-               double w,
-               bool intercept,
-               Vector& out) {
+  void compute(
+      const PeriodFit& fit, const double* x, double w, bool intercept, Vector& out) {
     const Index size = fit.slopes.rows();
     centred = Eigen::Map<const Vector>(x, size);
     if (intercept) centred -= fit.centre;
@@ -329,11 +326,12 @@ inline void store_period(const PeriodFit& fit, Index t, TwoPass& out) {
     return facts;
   };
   if (n_no_variation > 0 && n_no_variation >= n_rank)
-    throw Error("no_variation", "A term does not vary across assets in any period.",
+    throw Error("no_variation",
+                "A term does not vary across assets in any period.",
                 with_term(flat_culprit));
   if (n_rank > 0)
-    throw Error("rank", "The terms are collinear in every period.",
-                with_term(rank_culprit));
+    throw Error(
+        "rank", "The terms are collinear in every period.", with_term(rank_culprit));
   throw Error("too_few", "No period has enough assets.", counts);
 }
 
@@ -345,9 +343,8 @@ inline TwoPass ragged_two_pass(const TwoPassData& data,
     throw Error("unsupported", "GLS needs a complete panel without traits.");
   TwoPass out = start_two_pass(data, options, std::move(first));
   const Index n_assets = data.returns.cols();
-  const Vector weight = options.weighting == Weighting::wls
-                            ? asset_weights(out.first)
-                            : Vector::Ones(n_assets);
+  const Vector weight = options.weighting == Weighting::wls ? asset_weights(out.first)
+                                                            : Vector::Ones(n_assets);
   const std::vector<PeriodFit> fits =
       fit_periods(data, options, out.first, weight.cwiseSqrt());
   for (Index t = 0; t < data.returns.rows(); ++t)

@@ -49,16 +49,16 @@ struct TwoPass {
   std::vector<Index> n_priced;        // N
 
   // Balanced only.
-  Matrix X;               // N x P, [1 B]
-  Matrix A;               // P x N, premia of a period = A R_t
-  Matrix H;               // P x P, (X'WX)^-1
-  double condition = kNaN;  // of X, columns at unit norm
-  double c = kNaN;        // gamma_f' Vf^-1 gamma_f, without the constant
-  Vector w;               // T, gamma_f' Vf^-1 d_t
-  Vector mean_factor;     // K
+  Matrix X;                  // N x P, [1 B]
+  Matrix A;                  // P x N, premia of a period = A R_t
+  Matrix H;                  // P x P, (X'WX)^-1
+  double condition = kNaN;   // of X, columns at unit norm
+  double c = kNaN;           // gamma_f' Vf^-1 gamma_f, without the constant
+  Vector w;                  // T, gamma_f' Vf^-1 d_t
+  Vector mean_factor;        // K
   Matrix factor_deviations;  // T x K, d_t
-  Matrix Vf;              // K x K, divisor T
-  Matrix loading_rows;    // T x P, (A e_t)' / T
+  Matrix Vf;                 // K x K, divisor T
+  Matrix loading_rows;       // T x P, (A e_t)' / T
 
   Index n_terms() const { return premia.size(); }
   Index n_periods() const { return period_premia.rows(); }

@@ -9,7 +9,8 @@
 //   f_approx      Q / (1 + c) (T - K - N + q) / (N - q) ~ F(N - q, T - K - N + q),
 //                 Q = corrected (1 + c) / T: Shanken's cross-sectional regression test,
 //                 approximate for q > 0
-//   moments       S = sum of rows e_t (1 - w_t) / T under `series` (estimated betas; the J
+//   moments       S = sum of rows e_t (1 - w_t) / T under `series` (estimated betas; the
+//   J
 //                 of the moment conditions at the two-pass estimates)
 //   grs, grs_chisq, grs_lr, grs_moments   see intercepts.hpp
 // Data-driven lags of `series` come from the averaged pricing errors, each scaled to unit
@@ -26,7 +27,8 @@ namespace detail {
 // N x (N - q), orthonormal, C'X = 0.
 inline Matrix complement(const Matrix& X) {
   const Index n = X.rows(), q = X.cols();
-  const Eigen::HouseholderQR<Matrix> qr(X * X.colwise().norm().cwiseInverse().asDiagonal());
+  const Vector norm = X.colwise().norm();
+  const Eigen::HouseholderQR<Matrix> qr(X * norm.cwiseInverse().asDiagonal());
   Matrix selector = Matrix::Zero(n, n - q);
   selector.bottomRows(n - q).setIdentity();
   return qr.householderQ() * selector;

@@ -1,14 +1,15 @@
-// Joint tests that all time-series intercepts a are zero: factors are traded and, like the
-// returns, excess returns (the caller's word). N assets, T periods, K factors, divisor T,
-// theta2 = mean f' Vf^-1 mean f, Q = a' Sigma^-1 a (Gibbons, Ross and Shanken 1989):
-//   grs           Q / (1 + theta2) (T - N - K) / N ~ F(N, T - N - K), exact if e is normal
-//   grs_chisq     T Q / (1 + theta2) ~ chi2(N)
-//   grs_lr        T log(1 + Q / (1 + theta2)) ~ chi2(N)
-//   grs_moments   a' S^-1 a ~ chi2(N), S = sum of rows e_t (1 - mean f' Vf^-1 d_t) / T under
+// Joint tests that all time-series intercepts a are zero: factors are traded and, like
+// the returns, excess returns (the caller's word). N assets, T periods, K factors,
+// divisor T, theta2 = mean f' Vf^-1 mean f, Q = a' Sigma^-1 a (Gibbons, Ross and Shanken
+// 1989):
+//   grs           Q / (1 + theta2) (T - N - K) / N ~ F(N, T - N - K), exact if e is
+//   normal grs_chisq     T Q / (1 + theta2) ~ chi2(N) grs_lr        T log(1 + Q / (1 +
+//   theta2)) ~ chi2(N) grs_moments   a' S^-1 a ~ chi2(N), S = sum of rows e_t (1 - mean
+//   f' Vf^-1 d_t) / T under
 //                 a series rule (Hansen 1982)
-// Data-driven lags come from the intercepts' rows, each scaled to unit variance, with equal
-// weights. No second pass is needed, so N may be smaller than K. A test that the sample
-// cannot carry is refused with a reason and its numbers. Complete returns only.
+// Data-driven lags come from the intercepts' rows, each scaled to unit variance, with
+// equal weights. No second pass is needed, so N may be smaller than K. A test that the
+// sample cannot carry is refused with a reason and its numbers. Complete returns only.
 // Cost O(T N^2 + N^3).
 #pragma once
 
@@ -74,11 +75,8 @@ inline void series_test(const TestedSeries& tested,
                         const std::vector<Index>& slot,
                         const TestSizes& sizes,
                         AlphaTest& test) {
-  const SeriesSum sum = sum_series_by(tested.rows,
-                                      slot,
-                                      tested.rule_map,
-                                      Vector::Ones(tested.rule_map.cols()),
-                                      series);
+  const SeriesSum sum = sum_series_by(
+      tested.rows, slot, tested.rule_map, Vector::Ones(tested.rule_map.cols()), series);
   test.lags = sum.lags;
   test.capped = sum.capped;
   test.negative_s0 = sum.negative_s0;
@@ -88,7 +86,8 @@ inline void series_test(const TestedSeries& tested,
 
 class InterceptTests {
  public:
-  // residuals T x N, alpha N, deviations T x K of the factors; all kept alive by the caller.
+  // residuals T x N, alpha N, deviations T x K of the factors; all kept alive by the
+  // caller.
   InterceptTests(const Matrix& residuals,
                  const Vector& alpha,
                  const Matrix& deviations,
@@ -96,8 +95,7 @@ class InterceptTests {
                  const TestSizes& sizes)
       : residuals_(residuals), alpha_(alpha), deviations_(deviations), sizes_(sizes) {
     const Matrix U = upper_triangle(deviations).U;
-    const Vector root =
-        U.transpose().triangularView<Eigen::Lower>().solve(mean_factor);
+    const Vector root = U.transpose().triangularView<Eigen::Lower>().solve(mean_factor);
     sharpe2_ = sizes.periods() * root.squaredNorm();
     tilt_ = U.triangularView<Eigen::Upper>().solve(root);
   }
@@ -136,11 +134,8 @@ class InterceptTests {
     const Vector factor = 1.0 / sizes_.periods() - (deviations_ * tilt_).array();
     const Matrix rows = factor.asDiagonal() * residuals_;
     const Vector spread = usable_scale(rows.colwise().norm());
-    series_test({rows, alpha_, spread.cwiseInverse().asDiagonal()},
-                series,
-                slot,
-                sizes_,
-                test);
+    series_test(
+        {rows, alpha_, spread.cwiseInverse().asDiagonal()}, series, slot, sizes_, test);
   }
 
   const Matrix& residuals_;
@@ -174,8 +169,7 @@ inline std::vector<AlphaTest> intercept_tests(const Eigen::Ref<const Matrix>& re
     residuals.col(i) = fit.residual;
     alpha(i) = fit.mean - basis.mean.dot(fit.beta);
   }
-  const detail::TestSizes sizes{
-      returns.cols(), returns.rows(), factors.cols(), 0};
+  const detail::TestSizes sizes{returns.cols(), returns.rows(), factors.cols(), 0};
   const detail::InterceptTests tests(residuals, alpha, basis.D, basis.mean, sizes);
   std::vector<AlphaTest> results;
   for (AlphaKind kind : kinds) {

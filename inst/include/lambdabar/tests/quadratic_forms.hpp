@@ -1,5 +1,5 @@
-// z' S^-1 z for a covariance S that may be singular or not positive: a value, or the reason
-// why there is none. Refusals are outcomes, not exceptions.
+// z' S^-1 z for a covariance S that may be singular or not positive: a value, or the
+// reason why there is none. Refusals are outcomes, not exceptions.
 #pragma once
 
 #include "../errors/positive.hpp"

@@ -1,13 +1,13 @@
 // Wald test of L theta = r:
 //   statistic = g' (L V L')^- g,  g = L theta - r,  df = rank of L V L'
 //
-// V: covariance of theta (P x P), L: q x P, r: q. The generalised inverse drops eigenvalues
-// of the unit-diagonal L V L' at or below `tolerance` times the largest (positive.hpp), so a
-// singular covariance (fewer clusters than restrictions, repeated restrictions) gives a test
-// on its rank, never one on rounding. `outside` is the share of g, in units of its standard
-// errors, that lies where L V L' has no variance: a restriction broken there is broken for
-// certain, whatever the statistic. The reference distribution (chi-square, or F with
-// statistic / df) is the caller's. Cost O(q^3).
+// V: covariance of theta (P x P), L: q x P, r: q. The generalised inverse drops
+// eigenvalues of the unit-diagonal L V L' at or below `tolerance` times the largest
+// (positive.hpp), so a singular covariance (fewer clusters than restrictions, repeated
+// restrictions) gives a test on its rank, never one on rounding. `outside` is the share
+// of g, in units of its standard errors, that lies where L V L' has no variance: a
+// restriction broken there is broken for certain, whatever the statistic. The reference
+// distribution (chi-square, or F with statistic / df) is the caller's. Cost O(q^3).
 #pragma once
 
 #include "../errors/positive.hpp"
@@ -28,7 +28,8 @@ inline WaldTest wald_test(const Vector& theta,
                           double tolerance = kInverseTolerance) {
   if (L.rows() == 0 || L.cols() != theta.size() || V.rows() != theta.size() ||
       V.cols() != theta.size() || r.size() != L.rows())
-    throw Error("input", "Shapes of the estimate, covariance and restrictions differ.",
+    throw Error("input",
+                "Shapes of the estimate, covariance and restrictions differ.",
                 {{"n_terms", static_cast<double>(theta.size())},
                  {"n_restrictions", static_cast<double>(L.rows())}});
   const Vector gap = L * theta - r;
