@@ -108,12 +108,12 @@ error_covariance.lb_err_hetero <- function(errors, fit, call = rlang::caller_env
     refuse_errors(errors, fit, "Variation over periods already carries heteroskedasticity: use {.fn err_iid} or {.fn err_hac}.", call)
   }
   type <- as.integer(substr(errors$type, 3L, 3L))
-  vcov <- core_result(
+  vcov <- row_result(
     cpp_heteroskedastic(fit$design, fit$panel$period, length(fit$panel$periods), fit$core, type, thread_count()),
-    call, list(leverage = "One row alone determines a coefficient: use {.val HC1}, or drop the term.")
+    fit$panel, call = call
   )
   list(
-    vcov = vcov, df = fit$n_used - fit$rank,
+    vcov = expand_aliased(vcov, fit$core$aliased), df = fit$n_used - fit$rank,
     phrase = paste0("heteroskedasticity-consistent (", errors$type, ")")
   )
 }

@@ -189,6 +189,31 @@ cross_columns <- function(term, columns, names) {
   out
 }
 
+# What the core says of single rows, with their names in the panel.
+row_result <- function(result, panel, weights = NULL, call = rlang::caller_env()) {
+  row <- if (inherits(result, "lb_core_error")) result$facts$row
+  if (is.null(row)) {
+    return(core_result(result, call, list(
+      too_few_rows = "{.fn panel_health} shows which column is missing where."
+    )))
+  }
+  asset <- panel$assets[panel$asset[row] + 1L]
+  period <- user_periods(panel$periods)[panel$period[row] + 1L]
+  where <- paste0("row ", row, ", ", format_key(asset), " in ", format_key(period))
+  message <- if (result$tag == "leverage") {
+    c(
+      "One row alone determines a coefficient: {where}.",
+      i = "Its HC2 and HC3 errors do not exist: use {.val HC1}, or drop the term."
+    )
+  } else {
+    c(
+      "The weight {.val {weights}} is negative: {where}, is the first such row.",
+      i = "Weights must be zero (the row does not enter) or positive."
+    )
+  }
+  abort_input(message, column = weights, row = row, asset = asset, period = period, call = call)
+}
+
 weight_part <- function(panel, weights, call) {
   check_column(panel$data, weights, "weights", call)
   value <- panel$data[[weights]]

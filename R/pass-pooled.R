@@ -49,12 +49,8 @@ pooled <- function(panel, formula, weights = NULL, errors = err_cluster("asset",
 }
 
 fit_pooled <- function(panel, design, weights = NULL, call = rlang::caller_env()) {
-  core <- core_result(
-    cpp_pooled(design, panel$period, length(panel$periods), thread_count()), call,
-    list(
-      input = "Weights must be zero or positive.",
-      too_few_rows = "{.fn panel_health} shows which column is missing where."
-    )
+  core <- row_result(
+    cpp_pooled(design, panel$period, length(panel$periods), thread_count()), panel, weights, call
   )
   structure(
     list(

@@ -66,9 +66,9 @@ price_traits <- function(panel, formula, weights = NULL, min_assets = NULL, aver
   if (!is.null(min_assets)) check_whole(min_assets, "min_assets", 1, .Machine$integer.max)
   design <- make_design(panel, formula, weights)
   T <- length(panel$periods)
-  sections <- core_result(
+  sections <- row_result(
     cpp_cross_sections(design, panel$period, T, if (is.null(min_assets)) 0 else min_assets, thread_count()),
-    explain = list(input = "Weights must be zero or positive.")
+    panel, weights
   )
   refuse_no_variation(design, sections)
   used <- which(sections$status == "estimated")

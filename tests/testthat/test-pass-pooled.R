@@ -26,6 +26,9 @@ test_that("collinear terms become NA with a warning, later ones stay", {
   plain <- pooled(small_panel(rows), ret ~ size + value)
   expect_equal(coef(fit)[-3], coef(plain), tolerance = 1e-12)
   expect_equal(vcov(fit)[-3, -3], vcov(plain), tolerance = 1e-12)
+  for (errors in list(err_iid(), err_hetero("HC2"))) {
+    expect_equal(vcov(restate(fit, errors))[-3, -3], vcov(restate(plain, errors)), tolerance = 1e-12)
+  }
   expect_equal(augment(fit)$.fitted, augment(plain)$.fitted, tolerance = 1e-12)
   expect_identical(term_test(fit)$num.df, 2)
   expect_output(print(fit), "NA")
@@ -48,6 +51,14 @@ test_that("clusters are columns or keys, and a missing id is an error that names
   expect_error(restate(by_key, err_cluster("nowhere")), class = "lambdabar_error_input")
   rows$all <- 1
   expect_error(pooled(small_panel(rows), ret ~ size, errors = err_cluster("all")), class = "lambdabar_error_sample")
+})
+
+test_that("a row of leverage one has no HC3 error, and is named", {
+  rows <- small_rows()
+  rows$alone <- as.numeric(seq_len(nrow(rows)) == 33)
+  fit <- pooled(small_panel(rows), ret ~ size + alone, errors = err_hetero("HC1"))
+  error <- expect_error(restate(fit, err_hetero("HC3")), "HC1", class = "lambdabar_error_input")
+  expect_identical(error$row, 33)
 })
 
 test_that("nested clusters are seen", {

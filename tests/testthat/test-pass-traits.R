@@ -84,7 +84,8 @@ test_that("too little data, negative weights and odd arguments are errors", {
   expect_error(price_traits(small_panel(), ret ~ size, min_assets = 50), class = "lambdabar_error_sample")
   rows$w <- 1
   rows$w[20] <- -1
-  expect_error(price_traits(small_panel(rows), ret ~ size, weights = "w"), class = "lambdabar_error_input")
+  error <- expect_error(price_traits(small_panel(rows), ret ~ size, weights = "w"), class = "lambdabar_error_input")
+  expect_identical(error[c("column", "row", "asset", "period")], list(column = "w", row = 20, asset = "f03", period = 202302L))
   expect_error(price_traits(rows, ret ~ size), class = "lambdabar_error_input")
   expect_error(price_traits(small_panel(), ret ~ size, average = "median"), class = "lambdabar_error_input")
   expect_error(price_traits(small_panel(), ret ~ size, errors = "hac"), class = "lambdabar_error_input")
