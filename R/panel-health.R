@@ -169,9 +169,9 @@ print.lb_health <- function(x, ...) {
   shown <- data.frame(
     check = x$check,
     column = ifelse(is.na(x$column), "", x$column),
-    found = paste0(format_count(x$count), " of ", format_count(x$of)),
+    found = vapply(x$count, format_count, ""),
     verdict = x$verdict,
-    detail = x$detail
+    detail = ifelse(x$count > 0, paste0("of ", vapply(x$of, format_count, ""), ": ", x$detail), x$detail)
   )
   cat_lines(paste0("Panel health: ", if (looks) count_of(looks, "finding") else "nothing", " to look at"), "")
   print_columns(shown, right = "found", wrap = "detail")
