@@ -79,6 +79,9 @@ core_result <- function(result, call = rlang::caller_env(), explain = list()) {
   if (!inherits(result, "lb_core_error")) {
     return(result)
   }
+  if (result$tag == "interrupted") {
+    rlang::interrupt()
+  }
   kinds <- c(
     rank = "rank", no_variation = "no_variation", constant_factor = "no_variation",
     unsupported = "unsupported", too_few = "sample", too_few_rows = "sample", clusters = "sample"

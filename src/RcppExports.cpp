@@ -335,7 +335,9 @@ static const R_CallMethodDef CallEntries[] = {
     {NULL, NULL, 0}
 };
 
+void watch_for_interrupts(DllInfo* /*dll*/);
 RcppExport void R_init_lambdabar(DllInfo *dll) {
     R_registerRoutines(dll, NULL, CallEntries, NULL, NULL);
     R_useDynamicSymbols(dll, FALSE);
+    watch_for_interrupts(dll);
 }
