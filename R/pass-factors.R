@@ -38,8 +38,9 @@
 #' factor is missing is left out for all assets and counted.
 #'
 #' @section What the errors do not cover:
-#' No error structure removes the attenuation that estimated betas cause, which is of the
-#' order N-free and 1/T: it is small for portfolios over long samples, not for single stocks.
+#' No error structure removes the attenuation that estimated betas cause. It shrinks as the
+#' sample grows longer, not as assets are added: small for portfolios over long samples, large
+#' for single stocks over short ones.
 #' Full-sample betas use data from after each period; they describe, they do not predict.
 #'
 #' @section Errors:
