@@ -174,6 +174,21 @@ TEST(Clusters, AnyNumberOfWaysAgreesWithAllPairsOfRows) {
   }
 }
 
+// The sums run in tiles of two and three columns: every rank up to a few tiles.
+TEST(Clusters, EveryRankAgreesWithAllPairsOfRows) {
+  for (Index k = 1; k <= 12; ++k) {
+    const Panel panel = ragged_panel(10, 8, k, 300 + static_cast<unsigned>(k));
+    for (const bool intercept : {true, false}) {
+      const Design design = panel.design(intercept, true);
+      const PooledFit fit = pooled(design, 1);
+      for (const Codes& codes : {Codes{panel.asset}, Codes{panel.asset, panel.period}}) {
+        const ClusterCovariance to = solve(design, fit, codes, SmallSample::each);
+        expect_close(to.raw, spelled_out(design, fit, codes, SmallSample::each), 1e-11);
+      }
+    }
+  }
+}
+
 TEST(Clusters, WithoutFactorsTheSumIsTheUnionOfTheClusters) {
   const Panel panel = holed_panel(202);
   const Codes codes = crossing_codes(panel);

@@ -54,34 +54,95 @@ inline constexpr double kEigenTolerance = 1e-12;
 // A variance left over from terms this many times its size has no digits.
 inline constexpr double kVarianceTolerance = 1e-13;
 inline constexpr double kLeverageTolerance = 1e-10;
-inline constexpr Index kBlocksAtATime = 16;
+inline constexpr Index kMaxSumChunks = 8;
+inline constexpr Index kSumDoubles = 2048 * 1024;  // 16 MB over all chunks
 
-// Whitened scores of a block's complete rows: column i is W v w e of rows[i].
-struct BlockScores {
-  Matrix scores;            // r x n
-  std::vector<Index> rows;  // n
-};
+// Scores of a block's complete rows: v w e, v the terms around the centre. A fit from
+// rows is too ill-conditioned for cross-products of v: there v is whitened first.
+class ScoreBlock {
+ public:
+  ScoreBlock(const Design& design, const PooledFit& fit)
+      : fit_(fit),
+        reader_(design, fit),
+        padded_(padded_columns(fit.rank)),
+        stride_((fit.rank + 1) / 2 * 2),
+        columns_(static_cast<std::size_t>(std::max(padded_, stride_) * kBlockStride),
+                 0.0),
+        turned_(static_cast<std::size_t>(stride_ * (kBlockRows + kRowPadding)), 0.0) {}
 
-inline BlockScores block_scores(PanelReader& reader, Index begin, Index n) {
-  BlockScores to;
-  reader.load(begin, n);
-  const RowBlock& block = reader.block();
-  Vector e = reader.residuals();
-  to.rows.resize(static_cast<std::size_t>(block.n_used()));
-  for (Index i = 0; i < block.n_used(); ++i) {
-    e[i] *= block.weight(i);
-    to.rows[static_cast<std::size_t>(i)] = block.row(i);
+  void load(Index begin, Index n) {
+    reader_.load(begin, n);
+    Vector e = reader_.residuals();
+    const RowBlock& block = reader_.block();
+    if (block.weighted()) {
+      for (Index i = 0; i < e.size(); ++i) e[i] *= block.weight(i);
+    }
+    fill(e);
+    for (Index l = 0; l < padded_; ++l) {
+      std::fill_n(column(l) + n_used(), kRowPadding, 0.0);
+    }
   }
-  to.scores = reader.whitened();
-  to.scores.array().rowwise() *= e.transpose().array();
-  return to;
-}
+
+  // The scores row by row, stride() apart.
+  void turn() {
+    for (Index i = 0; i < n_used(); i += kTurnRows) {
+      const Index stop = std::min(n_used(), i + kTurnRows);
+      for (Index l = 0; l < stride_; l += 2)
+        turn_pair(column(l), column(l + 1), i, stop, l);
+    }
+  }
+
+  Index n_used() const { return reader_.block().n_used(); }
+  Index row(Index i) const { return reader_.block().row(i); }
+  Index stride() const { return stride_; }
+  Index padded() const { return padded_; }
+  const double* columns() const { return columns_.data(); }
+  const double* turned(Index i) const { return turned_.data() + i * stride_; }
+
+ private:
+  static constexpr Index kTurnRows = 128;
+
+  double* column(Index l) { return columns_.data() + l * kBlockStride; }
+
+  void fill(const Vector& e) {
+    if (fit_.from_rows) {
+      Eigen::Map<Matrix, 0, Eigen::OuterStride<>> to(
+          columns_.data(), n_used(), fit_.rank, Eigen::OuterStride<>(kBlockStride));
+      to = reader_.terms() * fit_.whiten.transpose();
+      to.array().colwise() *= e.array();
+      return;
+    }
+    for (Index l = 0; l < fit_.rank; ++l) {
+      Eigen::Map<Vector> to(column(l), n_used());
+      if (reader_.is_constant(l)) {
+        to = e;
+      } else {
+        to = reader_.term(l).cwiseProduct(e);
+      }
+    }
+  }
+
+  void turn_pair(const double* a, const double* b, Index i, Index stop, Index l) {
+    for (; i < stop; i += 2) {
+      const Lanes left = load_lanes(a + i), right = load_lanes(b + i);
+      double* to = turned_.data() + i * stride_ + l;
+      store_lanes(to, Lanes{left[0], right[0]});
+      store_lanes(to + stride_, Lanes{left[1], right[1]});
+    }
+  }
+
+  const PooledFit& fit_;
+  PanelReader reader_;
+  Index padded_, stride_;
+  std::vector<double> columns_, turned_;
+};
 
 inline void add_outer(const Matrix& columns, Matrix& to) {
   to.selfadjointView<Eigen::Lower>().rankUpdate(columns);
 }
 
-// From whitened scores to psi: psi = (whiten L)' u, L as in bread_of().
+// From whitened scores to psi: psi = (whiten L)' u, L as in bread_of(). Only the lower
+// triangle of `meat` is read.
 inline Matrix psi_meat(const Design& design, const PooledFit& fit, const Matrix& meat) {
   Matrix back = fit.whiten;
   const Index r = fit.rank;
@@ -290,62 +351,112 @@ class Intersections {
   std::vector<std::vector<int>> memory_;
 };
 
-// Sums whitened scores inside the groups of one grouping.
-class GroupSummer {
+// Scores of one chunk of rows, added up inside the groups of every grouping.
+class GroupSums {
  public:
-  GroupSummer(const Grouping& grouping, Index rank)
-      : grouping_(grouping), meat_(Matrix::Zero(rank, rank)) {
-    if (grouping.code) sums_.setZero(rank, grouping.n_codes);
+  GroupSums(const std::vector<Grouping>& groupings, Index rank)
+      : groupings_(&groupings), rank_(rank) {
+    for (const Grouping& grouping : groupings) {
+      const Index stride = grouping.code ? (rank + 1) / 2 * 2 : 0;
+      sums_.push_back(Matrix::Zero(stride, grouping.n_codes));
+      any_codes_ = any_codes_ || grouping.code;
+    }
+    const Index padded = padded_columns(rank);
+    cross_.assign(static_cast<std::size_t>(padded * padded), 0.0);
   }
 
-  void add(const BlockScores& block) {
-    if (!grouping_.code) return add_outer(block.scores, meat_);
-    for (std::size_t i = 0; i < block.rows.size(); ++i) {
-      sums_.col(grouping_.code[block.rows[i]]) += block.scores.col(static_cast<Index>(i));
+  void add(ScoreBlock& block) {
+    if (any_codes_) block.turn();
+    bool alone = false;
+    for (std::size_t s = 0; s < sums_.size(); ++s) {
+      const int* code = (*groupings_)[s].code;
+      if (code) {
+        scatter(block, code, sums_[s]);
+      } else {
+        alone = true;
+      }
     }
+    if (!alone) return;
+    add_cross_products(block.columns(), block.padded(), block.n_used(), cross_);
   }
 
-  Matrix meat() {
-    for (Index g = 0; g < sums_.cols(); g += kBlockRows) {
-      add_outer(sums_.middleCols(g, std::min(kBlockRows, sums_.cols() - g)), meat_);
+  void join(const GroupSums& other) {
+    for (std::size_t s = 0; s < sums_.size(); ++s) sums_[s] += other.sums_[s];
+    for (std::size_t i = 0; i < cross_.size(); ++i) cross_[i] += other.cross_[i];
+  }
+
+  Matrix meat(std::size_t s) const {
+    Matrix meat = Matrix::Zero(rank_, rank_);
+    if (!(*groupings_)[s].code) {
+      const Index padded = padded_columns(rank_);
+      for (Index i = 0; i < rank_; ++i) {
+        for (Index j = 0; j <= i; ++j) {
+          meat(i, j) = cross_[static_cast<std::size_t>(i * padded + j)];
+        }
+      }
+      return meat;
     }
-    return meat_;
+    add_outer(sums_[s].topRows(rank_), meat);
+    return meat;
   }
 
  private:
-  Grouping grouping_;
-  Matrix sums_;  // r x codes
-  Matrix meat_;  // lower triangle
+  static void scatter(const ScoreBlock& block, const int* code, Matrix& sums) {
+    const Index stride = block.stride();
+    for (Index i = 0; i < block.n_used(); ++i) {
+      double* to = sums.data() + stride * code[block.row(i)];
+      const double* from = block.turned(i);
+      for (Index l = 0; l < stride; l += 2) {
+        store_lanes(to + l, load_lanes(to + l) + load_lanes(from + l));
+      }
+    }
+  }
+
+  const std::vector<Grouping>* groupings_;
+  Index rank_;
+  bool any_codes_ = false;
+  std::vector<Matrix> sums_;   // stride x codes
+  std::vector<double> cross_;  // every row its own group
 };
 
-// One pass for all groupings: scores of some blocks side by side, then each grouping
-// takes them in row order.
+inline Index count_sum_chunks(const std::vector<Grouping>& groupings,
+                              Index rank,
+                              Index n_blocks) {
+  Index doubles = 1;
+  for (const Grouping& grouping : groupings) {
+    if (grouping.code) doubles += (rank + 1) * grouping.n_codes;
+  }
+  const Index by_memory = std::max<Index>(1, kSumDoubles / doubles);
+  return std::max<Index>(1, std::min({n_blocks, kMaxSumChunks, by_memory}));
+}
+
+// One pass for all groupings. Chunks are cut by the data alone and joined in order.
 inline std::vector<ClusterSums> sum_groupings(const Design& design,
                                               const PooledFit& fit,
                                               const std::vector<Grouping>& groupings,
                                               int threads) {
-  std::vector<GroupSummer> summers;
-  for (const Grouping& grouping : groupings) summers.emplace_back(grouping, fit.rank);
-  std::vector<PanelReader> readers(kBlocksAtATime, PanelReader(design, fit));
-  std::vector<BlockScores> blocks(kBlocksAtATime);
   const Index n_blocks = count_blocks(design.n_rows);
-  for (Index first = 0; first < n_blocks; first += kBlocksAtATime) {
-    const Index n = std::min(kBlocksAtATime, n_blocks - first);
-    for_each_task(n, threads, [&](Index b) {
-      const Index begin = (first + b) * kBlockRows;
-      const Index size = std::min(kBlockRows, design.n_rows - begin);
-      const std::size_t at = static_cast<std::size_t>(b);
-      blocks[at] = block_scores(readers[at], begin, size);
-    });
-    for_each_task(static_cast<Index>(summers.size()), threads, [&](Index s) {
-      for (Index b = 0; b < n; ++b) {
-        summers[static_cast<std::size_t>(s)].add(blocks[static_cast<std::size_t>(b)]);
-      }
-    });
-  }
+  const Index n_chunks = count_sum_chunks(groupings, fit.rank, n_blocks);
+  std::vector<GroupSums> chunks(static_cast<std::size_t>(n_chunks),
+                                GroupSums(groupings, fit.rank));
+  for_each_task(n_chunks, threads, [&](Index c) {
+    ScoreBlock block(design, fit);
+    const Index end = chunk_begin(n_blocks, n_chunks, c + 1);
+    for (Index b = chunk_begin(n_blocks, n_chunks, c); b < end; ++b) {
+      const Index begin = b * kBlockRows;
+      block.load(begin, std::min(kBlockRows, design.n_rows - begin));
+      chunks[static_cast<std::size_t>(c)].add(block);
+    }
+  });
+  for (std::size_t c = 1; c < chunks.size(); ++c) chunks[0].join(chunks[c]);
   std::vector<ClusterSums> sums;
-  for (std::size_t s = 0; s < summers.size(); ++s) {
-    sums.push_back({psi_meat(design, fit, summers[s].meat()), groupings[s].n_groups});
+  for (std::size_t s = 0; s < groupings.size(); ++s) {
+    Matrix meat = chunks[0].meat(s);
+    if (!fit.from_rows) {
+      const Matrix full = meat.selfadjointView<Eigen::Lower>();
+      meat = fit.whiten * full * fit.whiten.transpose();
+    }
+    sums.push_back({psi_meat(design, fit, meat), groupings[s].n_groups});
   }
   return sums;
 }

@@ -157,6 +157,7 @@ class RowBlock {
     const int n_variables = static_cast<int>(columns_.size());
     std::fill_n(offender_.begin(), n, -1);
     for (int j = 0; j < n_variables; ++j) {
+      if (std::isfinite(sum_[static_cast<std::size_t>(j)])) continue;
       const double* values = column(j);
       for (Index i = 0; i < n; ++i) {
         if (std::isfinite(values[i]) || offender_[i] >= 0) continue;

@@ -159,16 +159,19 @@ inline void add_dots_3(const double* a, Index n, double* out, Index ld) {
 
 inline Index padded_columns(Index n) { return (n + 2) / 3 * 3; }
 
-// cross (padded x padded, by rows) += the lower triangle of the block's cross-products.
-inline void add_cross_products(const RowBlock& block, std::vector<double>& cross) {
-  const Index padded = padded_columns(block.n_columns());
-  for (Index begin = 0; begin < block.n_used(); begin += kTileRows) {
-    const Index n = std::min(kTileRows, block.n_used() - begin);
+// cross (padded x padded, by rows) += the lower triangle of the cross-products of packed
+// columns, kBlockStride apart, with rows of zeros behind the last.
+inline void add_cross_products(const double* columns,
+                               Index padded,
+                               Index n_rows,
+                               std::vector<double>& cross) {
+  for (Index begin = 0; begin < n_rows; begin += kTileRows) {
+    const Index n = std::min(kTileRows, n_rows - begin);
     for (Index i = 0; i < padded; i += 3) {
-      const double* a = block.column(i) + begin;
+      const double* a = columns + i * kBlockStride + begin;
       double* out = cross.data() + i * padded;
       for (Index j = 0; j < i; j += 3) {
-        add_dots_3x3(a, block.column(j) + begin, n, out + j, padded);
+        add_dots_3x3(a, columns + j * kBlockStride + begin, n, out + j, padded);
       }
       add_dots_3(a, n, out + i, padded);
     }
@@ -240,7 +243,7 @@ class RunSummer {
       for (std::size_t j = 0; j < sum_.size(); ++j) {
         sum_[j] += block_.sum(static_cast<Index>(j));
       }
-      add_cross_products(block_, cross_);
+      add_cross_products(block_.column(0), padded_, block_.n_used(), cross_);
     }
     table_.used[static_cast<std::size_t>(period - table_.first_period)] = used;
     write(weight, table_.sums_of(period));

@@ -86,18 +86,27 @@ class PanelReader {
 
   // Whitened terms, one row of the panel a column (r x n): their weighted cross-products
   // over the panel are the identity.
-  Matrix whitened() const {
-    const Index n = block_.n_used(), r = static_cast<Index>(columns_.size());
-    Matrix terms(n, r);
-    for (Index l = 0; l < r; ++l) {
-      const Index column = columns_[static_cast<std::size_t>(l)];
-      if (column == kConstant) {
+  Matrix whitened() const { return fit_.whiten * terms().transpose(); }
+
+  // Terms around the centre, n x r.
+  Matrix terms() const {
+    Matrix terms(block_.n_used(), rank());
+    for (Index l = 0; l < rank(); ++l) {
+      if (is_constant(l)) {
         terms.col(l).setOnes();
       } else {
-        terms.col(l) = block_column(column);
+        terms.col(l) = block_column(columns_[static_cast<std::size_t>(l)]);
       }
     }
-    return fit_.whiten * terms.transpose();
+    return terms;
+  }
+
+  Index rank() const { return static_cast<Index>(columns_.size()); }
+  bool is_constant(Index l) const {
+    return columns_[static_cast<std::size_t>(l)] == kConstant;
+  }
+  Eigen::Map<const Vector> term(Index l) const {
+    return block_column(columns_[static_cast<std::size_t>(l)]);
   }
 
  private:
