@@ -26,6 +26,7 @@
 #pragma once
 
 #include "../passes/pooled.hpp"
+#include "positive.hpp"
 
 namespace lambdabar {
 
@@ -49,8 +50,6 @@ struct ClusterCovariance {
 
 namespace detail {
 
-// Below this share of the largest eigenvalue a negative one is rounding.
-inline constexpr double kEigenTolerance = 1e-12;
 // A variance left over from terms this many times its size has no digits.
 inline constexpr double kVarianceTolerance = 1e-13;
 inline constexpr double kLeverageTolerance = 1e-10;
@@ -469,25 +468,6 @@ inline double small_sample_factor(SmallSample small,
   return g / (g - 1) * ((n - 1) / (n - static_cast<double>(fit.rank)));
 }
 
-// Cuts negative eigenvalues off `to.raw` scaled by `scale`, or keeps it to the bit.
-inline void make_semidefinite(const Vector& scale, ClusterCovariance& to) {
-  to.vcov = to.raw;
-  const Vector inverse = (scale.array() > 0).select(scale.cwiseInverse(), 1.0);
-  const Vector forward = inverse.cwiseInverse();
-  const Eigen::SelfAdjointEigenSolver<Matrix> eigen(inverse.asDiagonal() * to.raw *
-                                                    inverse.asDiagonal());
-  const Vector& values = eigen.eigenvalues();
-  const double largest = values.cwiseAbs().maxCoeff();
-  if (!(largest > 0)) return;
-  to.min_eigen_relative = values[0] / largest;
-  to.n_clipped = (values.array() < -kEigenTolerance * largest).count();
-  if (to.n_clipped == 0) return;
-  const Matrix& vectors = eigen.eigenvectors();
-  const Matrix half =
-      forward.asDiagonal() * vectors * values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
-  to.vcov = half * half.transpose();
-}
-
 inline void find_nesting(const UsedRows& used,
                          const std::vector<Grouping>& groupings,
                          std::vector<int>& nested_in) {
@@ -602,7 +582,11 @@ inline ClusterCovariance clustered(const Design& design,
     to.not_positive.push_back(to.raw(j, j) <= detail::kVarianceTolerance * size[j]);
   }
   const Matrix& scale = n_dimensions > 1 ? sums[rows_alone].meat : to.raw;
-  detail::make_semidefinite(scale.diagonal().cwiseMax(0.0).cwiseSqrt(), to);
+  const PositiveRepair repair =
+      make_positive(to.raw, scale.diagonal().cwiseMax(0.0).cwiseSqrt());
+  to.vcov = repair.value;
+  to.min_eigen_relative = repair.min_eigen_relative;
+  to.n_clipped = repair.n_clipped;
   to.nested_in.assign(n_dimensions, -1);
   detail::find_nesting(used, groupings, to.nested_in);
   return to;

@@ -35,6 +35,10 @@ struct GeneralisedInverse {
 // ones.
 inline constexpr double kInverseTolerance = 1e-9;
 
+// Eigenvalues this little below zero, relative to the largest, are rounding: sums over
+// clusters of fewer than P groups have exact zeros there.
+inline constexpr double kNegativeTolerance = 1e-12;
+
 namespace detail {
 
 inline Vector usable_scale(const Vector& scale) {
@@ -49,11 +53,6 @@ inline Matrix scaled_by_inverse(const Matrix& S, const Vector& scale) {
 inline double smallest_over_largest(const Vector& eigenvalues) {
   const double largest = eigenvalues.cwiseAbs().maxCoeff();
   return largest > 0.0 ? eigenvalues.minCoeff() / largest : 0.0;
-}
-
-// Eigenvalues this little below zero, relative to the largest, are rounding.
-inline double rounding_floor(Index size) {
-  return -16.0 * std::numeric_limits<double>::epsilon() * static_cast<double>(size);
 }
 
 }  // namespace detail
@@ -73,13 +72,15 @@ inline PositiveRepair make_positive(const Matrix& S, const Vector& scale) {
   const Eigen::SelfAdjointEigenSolver<Matrix> eigen(detail::scaled_by_inverse(S, d));
   const Vector& values = eigen.eigenvalues();
   const double relative = detail::smallest_over_largest(values);
-  if (relative >= detail::rounding_floor(S.rows())) return {S, relative, 0};
+  const double floor = -kNegativeTolerance * values.cwiseAbs().maxCoeff();
+  const Index n_clipped = (values.array() < floor).count();
+  if (n_clipped == 0) return {S, relative, 0};
   const Matrix root = d.asDiagonal() * eigen.eigenvectors() *
                       values.cwiseMax(0.0).cwiseSqrt().asDiagonal();
   Matrix repaired = Matrix::Zero(S.rows(), S.cols());
   repaired.selfadjointView<Eigen::Lower>().rankUpdate(root);
   repaired.triangularView<Eigen::StrictlyUpper>() = repaired.transpose();
-  return {repaired, relative, (values.array() < 0.0).count()};
+  return {repaired, relative, n_clipped};
 }
 
 // Inverse on the span of the eigenvectors whose eigenvalue exceeds
