@@ -17,6 +17,14 @@ cpp_wald <- function(theta, vcov, restrictions, value) {
     .Call(`_lambdabar_cpp_wald`, theta, vcov, restrictions, value)
 }
 
+cpp_exposures <- function(data, queries, settings, wanted) {
+    .Call(`_lambdabar_cpp_exposures`, data, queries, settings, wanted)
+}
+
+cpp_shrink_betas <- function(beta, std_error, date, n_dates, rule) {
+    .Call(`_lambdabar_cpp_shrink_betas`, beta, std_error, date, n_dates, rule)
+}
+
 cpp_two_pass <- function(input) {
     .Call(`_lambdabar_cpp_two_pass`, input)
 }

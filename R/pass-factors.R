@@ -119,22 +119,6 @@ price_factors <- function(panel, formula, exposure = window_full(), method = "ol
   restate(fit, errors)
 }
 
-#' Which dates a beta sees
-#'
-#' @details `window_full()`: all periods of the sample. Such betas describe the sample; they
-#'   use data from after the period that they price.
-#' @return An object of class `lb_window`, for [price_factors()].
-#' @examples
-#' window_full()
-#' @export
-window_full <- function() structure(list(kind = "full"), class = "lb_window")
-
-#' @export
-print.lb_window <- function(x, ...) {
-  cat_lines("Betas from all periods of the sample")
-  invisible(x)
-}
-
 factor_design <- function(panel, formula, call = rlang::caller_env()) {
   design <- make_design(panel, formula, call = call)
   if (!design$intercept) {

@@ -69,6 +69,33 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_exposures
+SEXP cpp_exposures(const Rcpp::List& data, const Rcpp::List& queries, const Rcpp::List& settings, const std::vector<std::string>& wanted);
+RcppExport SEXP _lambdabar_cpp_exposures(SEXP dataSEXP, SEXP queriesSEXP, SEXP settingsSEXP, SEXP wantedSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type data(dataSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type queries(queriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type settings(settingsSEXP);
+    Rcpp::traits::input_parameter< const std::vector<std::string>& >::type wanted(wantedSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_exposures(data, queries, settings, wanted));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_shrink_betas
+Rcpp::List cpp_shrink_betas(const Rcpp::NumericMatrix& beta, const Rcpp::NumericMatrix& std_error, const Rcpp::IntegerVector& date, int n_dates, const std::string& rule);
+RcppExport SEXP _lambdabar_cpp_shrink_betas(SEXP betaSEXP, SEXP std_errorSEXP, SEXP dateSEXP, SEXP n_datesSEXP, SEXP ruleSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type beta(betaSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type std_error(std_errorSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type date(dateSEXP);
+    Rcpp::traits::input_parameter< int >::type n_dates(n_datesSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type rule(ruleSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_shrink_betas(beta, std_error, date, n_dates, rule));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_two_pass
 SEXP cpp_two_pass(const Rcpp::List& input);
 RcppExport SEXP _lambdabar_cpp_two_pass(SEXP inputSEXP) {
@@ -313,6 +340,8 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_heteroskedastic", (DL_FUNC) &_lambdabar_cpp_heteroskedastic, 6},
     {"_lambdabar_cpp_clustered", (DL_FUNC) &_lambdabar_cpp_clustered, 8},
     {"_lambdabar_cpp_wald", (DL_FUNC) &_lambdabar_cpp_wald, 4},
+    {"_lambdabar_cpp_exposures", (DL_FUNC) &_lambdabar_cpp_exposures, 4},
+    {"_lambdabar_cpp_shrink_betas", (DL_FUNC) &_lambdabar_cpp_shrink_betas, 5},
     {"_lambdabar_cpp_two_pass", (DL_FUNC) &_lambdabar_cpp_two_pass, 1},
     {"_lambdabar_cpp_shanken", (DL_FUNC) &_lambdabar_cpp_shanken, 3},
     {"_lambdabar_cpp_alpha_covariance", (DL_FUNC) &_lambdabar_cpp_alpha_covariance, 4},
