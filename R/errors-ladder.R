@@ -84,6 +84,9 @@ ladder_structures <- function(fit) {
       err_iid(), err_hetero(), err_cluster("asset"), err_cluster("period"), err_cluster("asset", "period")
     ))
   }
+  if (!is.null(fit$asset_rows)) {
+    return(list(err_assets(realised = TRUE), err_assets(), err_assets(series = err_hac())))
+  }
   series <- list(err_iid(), err_hac(), err_hac("newey_west"), err_hac("andrews", "qs"))
   if (!is_two_pass(fit)) {
     return(series)

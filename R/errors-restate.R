@@ -53,6 +53,10 @@ fit_kind <- function(fit) {
     "a pooled regression"
   } else if (is_two_pass(fit)) {
     "premia on estimated betas"
+  } else if (!is.null(fit$asset_rows)) {
+    "bias-corrected betas of the whole sample"
+  } else if (is_moving(fit)) {
+    "premia on betas that move"
   } else {
     "averaged premia on observed characteristics"
   }
@@ -68,6 +72,7 @@ error_covariance.lb_err_iid <- function(errors, fit, call = rlang::caller_env())
       phrase = "independent rows of equal variance"
     ))
   }
+  refuse_amplified(errors, fit, call)
   series_covariance(errors, fit$rows, fit$slot, fit)
 }
 
@@ -76,13 +81,14 @@ error_covariance.lb_err_hac <- function(errors, fit, call = rlang::caller_env())
   if (inherits(fit, "lb_pooled")) {
     refuse_errors(errors, fit, "Rows of a panel are no time series: use {.code err_cluster(\"asset\", \"period\")}.", call)
   }
+  refuse_amplified(errors, fit, call)
   series_covariance(errors, fit$rows, fit$slot, fit)
 }
 
 #' @exportS3Method
 error_covariance.lb_err_eiv <- function(errors, fit, call = rlang::caller_env()) {
   if (!is_two_pass(fit)) {
-    refuse_errors(errors, fit, "Only {.fn price_factors} estimates betas; use {.fn err_hac} here.", call)
+    refuse_errors(errors, fit, advice_without_rows(fit), call)
   }
   if (errors$form == "robust") {
     out <- first_pass_covariance(errors$series, fit$rows_estimated, fit)
@@ -95,11 +101,97 @@ error_covariance.lb_err_eiv <- function(errors, fit, call = rlang::caller_env())
 #' @exportS3Method
 error_covariance.lb_err_moments <- function(errors, fit, call = rlang::caller_env()) {
   if (!is_two_pass(fit)) {
-    refuse_errors(errors, fit, "Only {.fn price_factors} has two passes to stack; use {.fn err_hac} here.", call)
+    refuse_errors(errors, fit, advice_without_rows(fit), call)
   }
   out <- first_pass_covariance(errors$series, fit$rows_estimated, fit)
   out$phrase <- paste0("both passes stacked as moments (Hansen 1982); ", out$phrase)
   out
+}
+
+# Rows with the first pass's error exist for one set of betas from the whole sample.
+advice_without_rows <- function(fit) {
+  if (!is.null(fit$asset_rows)) {
+    "Use {.fn err_assets}."
+  } else if (is_moving(fit)) {
+    "When betas move, the variation of the premia over time holds the noise of each window: use {.fn err_hac}."
+  } else {
+    "Only {.fn price_factors} with one set of betas has the first pass's error in its rows; use {.fn err_hac} here."
+  }
+}
+
+refuse_amplified <- function(errors, fit, call) {
+  if (!is.null(fit$asset_rows)) {
+    refuse_errors(errors, fit, "Its single periods are amplified, so their variation over time says nothing: use {.fn err_assets}.", call)
+  }
+}
+
+#' @exportS3Method
+error_covariance.lb_err_assets <- function(errors, fit, call = rlang::caller_env()) {
+  if (is.null(fit$asset_rows)) {
+    refuse_errors(errors, fit, "They are for bias-corrected betas of the whole sample; use {.fn err_hac} here.", call)
+  }
+  group <- asset_groups(errors$by, fit, call)
+  summed <- rowsum(fit$asset_rows, group, na.rm = FALSE)
+  G <- nrow(summed)
+  if (G < 2L) {
+    abort_sample("Errors over assets need two clusters of {.val {errors$by}} or more.", call = call)
+  }
+  vcov <- crossprod(summed) * (G / (G - 1))
+  df <- G - 1
+  if (!errors$realised) {
+    sampling <- factor_sampling(errors, fit)
+    at <- match(rownames(sampling), fit$terms)
+    vcov[at, at] <- vcov[at, at] + sampling
+    df <- min(df, length(fit$slot) - 1)
+  }
+  what <- if (is.null(errors$by)) "assets" else paste0("clusters of assets by ", errors$by)
+  list(
+    vcov = unname(vcov), df = df,
+    phrase = paste0(
+      "summed over ", format_count(G), " ", what, ", periods independent",
+      if (errors$realised) "; for the premia realised in this sample" else "; plus the sampling error of the factors' means"
+    )
+  )
+}
+
+# The cluster of each asset, numbered; assets without rows in the estimate count as none.
+asset_groups <- function(by, fit, call) {
+  in_use <- rowSums(fit$asset_rows != 0) > 0
+  if (is.null(by)) {
+    return(ifelse(in_use, seq_along(in_use), which(in_use)[1L]))
+  }
+  check_column(fit$panel$data, by, "by", call)
+  value <- fit$panel$data[[by]]
+  first <- match(seq_along(in_use), fit$panel$asset + 1L)
+  of_asset <- value[first]
+  differs <- which(rows_used(fit) & (is.na(value) | value != of_asset[fit$panel$asset + 1L]))
+  if (length(differs)) {
+    row <- differs[1L]
+    asset <- fit$panel$assets[fit$panel$asset[row] + 1L]
+    period <- user_periods(fit$panel$periods)[fit$panel$period[row] + 1L]
+    abort_input(
+      c(
+        "{.val {by}} must have one value for each asset.",
+        x = "It is missing or changes for {format_key(asset)} in {format_key(period)} (row {row})."
+      ),
+      column = by, asset = asset, period = period, row = row, call = call
+    )
+  }
+  group <- match(of_asset, unique(of_asset[in_use]))
+  ifelse(in_use, group, group[in_use][1L])
+}
+
+# Long-run covariance of the factors' means over the periods in use.
+factor_sampling <- function(errors, fit) {
+  factors <- fit$factors[fit$panel$slot %in% fit$slot, , drop = FALSE]
+  kept <- stats::complete.cases(factors)
+  factors <- factors[kept, , drop = FALSE]
+  T <- nrow(factors)
+  rows <- sweep(factors, 2L, colMeans(factors)) / T
+  S <- core_result(cpp_sum_series(rows, fit$slot[kept] - 1L, rep(1, ncol(rows)), series_options(errors$series)))$S
+  if (errors$series$adjust) S <- S * (T / (T - 1))
+  dimnames(S) <- rep(list(colnames(factors)), 2L)
+  S
 }
 
 #' @exportS3Method
@@ -121,7 +213,7 @@ error_covariance.lb_err_hetero <- function(errors, fit, call = rlang::caller_env
 #' @exportS3Method
 error_covariance.lb_err_misspec <- function(errors, fit, call = rlang::caller_env()) {
   if (!is_two_pass(fit)) {
-    refuse_errors(errors, fit, "Only {.fn price_factors} prices assets by a model; use {.fn err_hac} here.", call)
+    refuse_errors(errors, fit, advice_without_rows(fit), call)
   }
   out <- first_pass_covariance(errors$series, fit$rows_misspecified, fit)
   out$phrase <- paste0("valid under a wrong model too (Kan, Robotti and Shanken 2013); ", out$phrase)

@@ -10,6 +10,7 @@
 #' | `err_eiv()` | premia on estimated betas | as its `series`, and the error of the betas |
 #' | `err_moments()` | premia on estimated betas | both passes stacked as moments, any autocorrelation of all of them |
 #' | `err_misspec()` | premia on estimated betas | as robust `err_eiv()`, and a model that does not price the assets |
+#' | `err_assets()` | bias-corrected betas of the whole sample | any distribution over assets, or clusters of them; periods independent |
 #' | `err_hetero()` | pooled | independent rows of unequal variance |
 #' | `err_cluster()` | pooled | any correlation inside clusters, in any number of ways |
 #'
@@ -38,6 +39,11 @@
 #'   (Jagannathan and Wang 1998); valid under conditional heteroskedasticity, and on ragged
 #'   panels.
 #' @param series `err_iid()` or `err_hac()`: the sum over periods.
+#' @param by Name of a column that puts assets into clusters (an industry), one value an
+#'   asset, or `NULL`.
+#' @param realised `TRUE`: errors for the premia realised in the sample, given the factors.
+#'   `FALSE` (default): for the premia themselves; the sampling error of the factors' means
+#'   under `series` is added to the factors' block, once.
 #' @param type `"HC0"` (White 1980), `"HC1"` (times n/(n-P)), `"HC2"`, `"HC3"` (divided by one
 #'   less the leverage, and by its square; MacKinnon and White 1985).
 #' @param ... Names of the columns whose values are the clusters, as strings: one for each way.
@@ -58,6 +64,11 @@
 #' add (Kan, Robotti and Shanken 2013); the premium is then the value that fits best under the
 #' weights of the second pass.
 #'
+#' `err_assets()` sums the score of each asset (or cluster of assets) of the corrected
+#' regression, times G/(G-1): valid for any number of periods as assets grow in number (the
+#' setting of Shanken 1992 and of Raponi, Robotti and Zaffaroni 2020; the sandwich in place of
+#' their plug-in allows for unequal variances and fat tails).
+#'
 #' Clusters in several ways follow Cameron, Gelbach and Miller (2011) and Thompson (2011). The
 #' result need not be positive semidefinite: it is then repaired (negative eigenvalues of the
 #' matrix scaled by heteroskedasticity-consistent errors become zero) with a warning, and a
@@ -75,9 +86,10 @@
 #' Andrews (1991), Econometrica 59, 817-858. Andrews and Monahan (1992), Econometrica 60,
 #' 953-966. Cameron, Gelbach and Miller (2011), Journal of Business & Economic Statistics 29,
 #' 238-249. Hansen (1982), Econometrica 50, 1029-1054. Jagannathan and Wang (1998), Journal of
-#' Finance 53, 1285-1309. Kan, Robotti and Shanken (2013), Journal of Finance 68, 2617-2649. MacKinnon and White (1985), Journal of Econometrics 29, 305-325.
-#' Newey and West (1987), Econometrica 55, 703-708; (1994), Review of Economic Studies 61,
-#' 631-653. Shanken (1992), Review of Financial Studies 5, 1-33. Thompson (2011), Journal of
+#' Finance 53, 1285-1309. Kan, Robotti and Shanken (2013), Journal of Finance 68, 2617-2649.
+#' MacKinnon and White (1985), Journal of Econometrics 29, 305-325. Newey and West (1987),
+#' Econometrica 55, 703-708; (1994), Review of Economic Studies 61, 631-653. Raponi, Robotti and
+#' Zaffaroni (2020), Review of Financial Studies 33, 2796-2842. Shanken (1992), Review of Financial Studies 5, 1-33. Thompson (2011), Journal of
 #' Financial Economics 99, 1-10. White (1980), Econometrica 48, 817-838.
 #'
 #' @examples
@@ -152,6 +164,15 @@ err_misspec <- function(series = err_iid()) {
 
 #' @rdname error_structures
 #' @export
+err_assets <- function(by = NULL, series = err_iid(), realised = FALSE) {
+  if (!is.null(by) && (!is.character(by) || length(by) != 1L || is.na(by))) {
+    abort_input("{.arg by} must be the name of one column, as a string, or {.code NULL}.")
+  }
+  new_errors("lb_err_assets", by = by, series = check_series(series), realised = check_flag(realised, "realised"))
+}
+
+#' @rdname error_structures
+#' @export
 err_hetero <- function(type = "HC1") {
   new_errors("lb_err_hetero", type = check_choice(type, paste0("HC", 0:3), "type"))
 }
@@ -204,6 +225,7 @@ format.lb_errors <- function(x, ...) {
     lb_err_eiv = paste0(if (x$form == "shanken") "Shanken" else "estimated betas", ", ", format(x$series)),
     lb_err_misspec = paste0("misspecified model, ", format(x$series)),
     lb_err_moments = paste0("stacked moments, ", format(x$series)),
+    lb_err_assets = paste0("summed over assets", if (!is.null(x$by)) paste0(" by ", x$by), if (x$realised) ", realised premia"),
     lb_err_hetero = paste0("heteroskedastic, ", x$type),
     lb_err_cluster = paste0("clustered by ", first_few(x$ways))
   )

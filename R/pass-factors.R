@@ -8,7 +8,9 @@
 #'   period, as [stack_returns()] makes them.
 #' @param formula Two-sided: returns on factors, such as `ret ~ mkt + smb` or
 #'   `I(ret - rf) ~ mkt`. The first pass always has a constant.
-#' @param exposure Which dates a beta sees: [window_full()].
+#' @param exposure Which dates a beta sees: [window_full()], or a window that moves, such as
+#'   [window_rolling()]; or the result of [exposures()], on this panel or on one of days, with
+#'   its leads and lags or shrinkage.
 #' @param method Weights of the second pass:
 #'   * `"ols"`: none;
 #'   * `"wls"`: one over each asset's residual variance;
@@ -22,6 +24,23 @@
 #' @param min_obs Fewest returns that an asset needs for its betas, at least K + 2 (the
 #'   default). Assets with fewer are left out and counted.
 #' @param min_assets Fewest assets that a period needs.
+#' @param correct What is done about the error of the betas themselves, which attenuates
+#'   premia with individual assets:
+#'   * `"none"`;
+#'   * `"bias"`: each cross-section less the sum of the betas' estimated error covariances
+#'     (Litzenberger and Ramaswamy 1979). Where that leaves a matrix that is not safely
+#'     positive definite, only a share is subtracted, so that a tenth of the worst
+#'     direction's spread remains; the periods concerned are counted in the printout. With
+#'     `window_full()` one regression over all periods takes the place of the average (single
+#'     periods would be amplified), with errors by [err_assets()];
+#'   * `"instruments"`: betas from alternate periods (alternate months of daily data) are
+#'     instruments for those of the others (Jegadeesh and others 2019). Each half needs half of
+#'     the window's `min_obs`. A period whose instruments are weaker than
+#'     \eqn{2/\sqrt{n}}{2/sqrt(n)}, in the smallest canonical correlation, is trimmed and
+#'     counted; slopes play no part in that.
+#' @param beta_lag How many periods before the one that is priced a moving beta must be known:
+#'   1 (default), so that returns of t or later never touch the betas used at t. 0 is a
+#'   look-ahead and is printed as such.
 #' @param errors An [error structure][error_structures] for premia. The default corrects for
 #'   the estimation of the betas in the closed form of Shanken (1992); where that form does
 #'   not exist (ragged panels, `traits`) and `errors` is not given, the robust rows
@@ -38,10 +57,15 @@
 #' factor is missing is left out for all assets and counted.
 #'
 #' @section What the errors do not cover:
-#' No error structure removes the attenuation that estimated betas cause. It shrinks as the
-#' sample grows longer, not as assets are added: small for portfolios over long samples, large
-#' for single stocks over short ones.
+#' No error structure removes the attenuation that estimated betas cause; `correct` does. It
+#' shrinks as the sample grows longer, not as assets are added: small for portfolios over long
+#' samples, large for single stocks over short ones.
 #' Full-sample betas use data from after each period; they describe, they do not predict.
+#'
+#' With betas that move, errors come from the variation of the premia over time
+#' ([err_hac()] by default, since windows overlap): they hold the noise that the betas' error
+#' adds to each period, but not the part that overlapping windows have in common, which is of
+#' the order of one over the number of assets.
 #'
 #' @section Errors:
 #' * `lambdabar_error_input`: a factor has two values inside one period (fields `column`,
@@ -68,19 +92,32 @@
 #' fit
 #' generics::augment(fit)
 #' alpha_test(fit)
+#'
+#' # Individual firms: betas of the 36 months before, corrected for their error
+#' firms <- asset_panel(demo_market(firms = 80, months = 84), "firm", "month")
+#' price_factors(firms, ret ~ mkt, exposure = window_rolling(36, min_obs = 24), correct = "bias")
 #' @export
 price_factors <- function(panel, formula, exposure = window_full(), method = "ols",
                           intercept = TRUE, traits = NULL, min_obs = NULL, min_assets = NULL,
-                          errors = err_eiv()) {
+                          correct = "none", beta_lag = 1, errors = err_eiv()) {
   check_panel(panel)
   check_errors(errors)
-  if (!inherits(exposure, "lb_window")) {
-    abort_input("{.arg exposure} must be a window such as {.code window_full()}.")
-  }
+  if (!inherits(exposure, "lb_exposures")) check_window(exposure, "exposure")
+  correct <- check_choice(correct, c("none", "bias", "instruments"), "correct")
+  check_whole(beta_lag, "beta_lag", 0, 1e6)
   method <- check_choice(method, c("ols", "wls", "gls"), "method")
   check_flag(intercept, "intercept")
   if (!is.null(min_obs)) check_whole(min_obs, "min_obs", 1, 1e9)
   if (!is.null(min_assets)) check_whole(min_assets, "min_assets", 1, 1e9)
+  moves <- inherits(exposure, "lb_exposures") || exposure$kind != "full" || correct != "none"
+  if (moves) {
+    if (!is.null(min_obs)) {
+      abort_input("{.arg min_obs} belongs to the window here, as in {.code window_rolling(60, min_obs = 24)}.")
+    }
+    fit <- price_moving(panel, formula, exposure, method, intercept, traits, min_assets, correct, beta_lag)
+    fit$call <- match.call()
+    return(restate(fit, if (missing(errors)) moving_errors(fit) else errors))
+  }
 
   design <- factor_design(panel, formula)
   factors <- factor_values(panel, design)

@@ -65,10 +65,7 @@ glance.lb_fit <- function(x, ...) {
 }
 
 fit_method <- function(fit) {
-  if (inherits(fit, "lb_pooled")) {
-    return(if (is.null(fit$weights)) "ols" else "wls")
-  }
-  if (is_two_pass(fit)) fit$method else if (is.null(fit$weights)) "ols" else "wls"
+  if (!is.null(fit$method)) fit$method else if (is.null(fit$weights)) "ols" else "wls"
 }
 
 #' @rdname fit_methods
@@ -104,8 +101,9 @@ nobs.lb_fit <- function(object, ...) object$nobs
 
 #' Rows with fitted values and residuals
 #'
-#' For [price_traits()] and [pooled()]: every row of the panel with what the coefficients
-#' predict for it. For [price_factors()]: one row an asset with its average pricing error.
+#' For [price_traits()], [pooled()] and betas that move: every row of the panel with what the
+#' coefficients predict for it. For [price_factors()] with one set of betas: one row an asset
+#' with its average pricing error.
 #'
 #' @param x,object The fit.
 #' @param ... Not used.
@@ -114,6 +112,8 @@ nobs.lb_fit <- function(object, ...) object$nobs
 #' * Characteristics and pooled fits: the panel's data as a tibble with `.fitted`, `.resid`
 #'   (at the averaged or pooled coefficients; `NA` where a variable is missing) and `.used`
 #'   (whether the row entered the estimate). `fitted()` and `residuals()` give the columns.
+#' * Two-pass fits with betas that move or are corrected: the same, with `beta_<factor>`, the
+#'   beta that was in use for the row (with instruments, the mean of the two halves').
 #' * Two-pass fits: a tibble with one row an asset: `asset`, `n_obs`, `mean_return`,
 #'   `.fitted` (what its betas, and its traits, predict), `alpha` (the average pricing error),
 #'   `std.error`, `statistic`, `p.value` under the fit's error structure, and a column
@@ -135,6 +135,7 @@ augment.lb_fit <- function(x, ...) {
   out$.fitted <- fitted(x)
   out$.resid <- residuals(x)
   out$.used <- rows_used(x)
+  if (is_moving(x)) out[paste0("beta_", colnames(x$betas))] <- as.data.frame(x$betas)
   out
 }
 
@@ -159,9 +160,9 @@ residuals.lb_fit <- function(object, ...) {
 # Complete rows of estimated periods.
 rows_used <- function(fit) {
   complete <- is.finite(residuals(fit))
-  if (!is.null(fit$design$weight)) complete <- complete & is_positive(fit$panel$data[[fit$weights]])
+  if (!is.null(fit$design$weight)) complete <- complete & is_positive(fit$design$weight[[1L]]$x)
   if (inherits(fit, "lb_premia")) {
-    complete <- complete & (fit$sections$status == "estimated")[fit$panel$period + 1L]
+    complete <- complete & (fit$sections$status %in% c("estimated", "pooled"))[fit$panel$period + 1L]
   }
   complete
 }
@@ -173,8 +174,12 @@ is_positive <- function(x) is.finite(x) & x > 0
 #' @param fit From [price_traits()] or [price_factors()].
 #' @return A tibble with T P rows: `period`, `term`, `estimate`, `std.error` (of that period's
 #'   least squares alone), `n_assets`, `r.squared`, `status`. Estimates are `NA` where the
-#'   status is not `"estimated"`.
-#' @section Errors: `lambdabar_error_unsupported` for a pooled fit, which has no such series.
+#'   status is not `"estimated"`. With `correct = "bias"` also `reliability` (of the worst
+#'   direction of the betas) and `kappa` (share of their error covariance that was subtracted;
+#'   below 1 where the guard acted); with `"instruments"` also `strength` (smallest canonical
+#'   correlation of the two halves' betas).
+#' @section Errors: `lambdabar_error_unsupported` for a pooled fit and for bias-corrected betas of
+#'   the whole sample, which have no such series.
 #' @examples
 #' panel <- asset_panel(demo_market(firms = 60, months = 24), "firm", "month")
 #' period_premia(price_traits(panel, ret ~ size + value))
@@ -184,15 +189,27 @@ period_premia <- function(fit) {
   if (!inherits(fit, "lb_premia")) {
     abort_unsupported("A pooled regression has no series of premia; {.fn price_traits} has.")
   }
+  if (!is.null(fit$asset_rows)) {
+    abort_unsupported(c(
+      "Bias-corrected betas of the whole sample have no series of premia: single periods would be amplified.",
+      i = "Use a moving window, such as {.code window_rolling(60)}."
+    ))
+  }
   s <- fit$sections
   T <- length(s$status)
   P <- length(fit$terms)
-  tibble::tibble(
+  out <- tibble::tibble(
     period = rep(user_periods(fit$panel$periods), each = P), term = rep(fit$terms, times = T),
     estimate = as.vector(s$coef), std.error = as.vector(s$std_error),
     n_assets = rep(s$n_used, each = P), r.squared = rep(s$r_squared, each = P),
     status = rep(s$status, each = P)
   )
+  if (!is.null(s$kappa)) {
+    out$reliability <- rep(pmax(0, 1 - 1 / s$smallest_root), each = P)
+    out$kappa <- rep(s$kappa, each = P)
+  }
+  if (!is.null(s$strength)) out$strength <- rep(s$strength, each = P)
+  out
 }
 
 #' What was used, what was dropped, and why
@@ -224,7 +241,7 @@ fit_usage <- function(fit) {
   status <- fit$sections$status
   counts <- cpp_usage(
     fit$design, fit$panel$period, T, fit$panel$asset, length(fit$panel$assets),
-    if (is.null(status)) rep(TRUE, T) else status == "estimated"
+    if (is.null(status)) rep(TRUE, T) else status %in% c("estimated", "pooled")
   )
   counts$status <- if (is.null(status)) ifelse(counts$n_used > 0, "pooled", "empty") else status
   if (is_two_pass(fit)) counts <- two_pass_usage(fit, counts)
@@ -239,6 +256,7 @@ reason_of <- function(fit, usage, t) {
     no_variation = paste(term, "does not vary in the period"),
     rank_deficient = paste(term, "is a combination of earlier terms in the period"),
     missing_factor = "a factor is missing in the period",
+    weak_instruments = paste0("instruments are too weak (strength ", format(fit$sections$strength[t], digits = 2), ")"),
     empty = "no complete row"
   )
   paste(c(missing_phrases(fit$design$variables, usage$missing[, t]), period), collapse = "; ")
@@ -257,7 +275,8 @@ missing_phrases <- function(variables, counts) {
 #' The influence rows behind the errors
 #'
 #' @param fit From [price_traits()] or [price_factors()].
-#' @return A matrix with one row a period and one column a term. Rows sum to zero; under
+#' @return A matrix with one row a period (an asset, for bias-corrected betas of the whole
+#'   sample) and one column a term. Rows sum to zero; under
 #'   independent periods and without small-sample factor the covariance is the sum of their
 #'   outer products. With [err_eiv()] in its robust form, [err_moments()] and [err_misspec()]
 #'   the rows carry the betas' own error (and that of a wrong model); for all other structures they are \eqn{\omega_t (b_t - \bar b)}{w_t (b_t - b)}.
@@ -273,6 +292,9 @@ influence_rows <- function(fit) {
     abort_unsupported("A pooled fit does not keep its {nobs(fit)} influence rows.")
   }
   errors <- fit$errors
+  if (!is.null(fit$asset_rows)) {
+    return(`dimnames<-`(fit$asset_rows, list(format_key(fit$panel$assets), fit$terms)))
+  }
   if (inherits(errors, "lb_err_misspec")) {
     rows <- fit$rows_misspecified
   } else if (inherits(errors, "lb_err_moments") || inherits(errors, "lb_err_eiv") && errors$form == "robust") {

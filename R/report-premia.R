@@ -1,24 +1,26 @@
 #' @export
 print.lb_premia <- function(x, ...) {
   unit <- period_noun(x$panel)
-  n_used <- sum(x$sections$status == "estimated")
-  title <- if (is_two_pass(x)) {
+  n_used <- sum(x$sections$status %in% c("estimated", "pooled"))
+  on_betas <- is_two_pass(x) || is_moving(x)
+  title <- if (on_betas) {
     paste0("Premia on factor exposures, ", toupper(x$method), " second pass")
   } else {
     "Premia on characteristics, one cross-section a period"
   }
   cat_lines(
     title,
-    paste0(deparse1(x$formula), if (is_two_pass(x)) paste0(", betas from ", x$exposure_phrase)),
+    paste0(deparse1(x$formula), if (on_betas) paste0(", betas from ", x$exposure_phrase)),
     ""
   )
   print_columns(coefficient_table(tidy(x)), right = c("premium", "error", "t", "p", "95% interval"))
   cat_lines(
     "",
-    label_line("Premium", paste0("decimal a ", unit, ", for one unit", if (is_two_pass(x)) " of beta", average_phrase(x))),
+    label_line("Premium", paste0("decimal a ", unit, ", for one unit", if (on_betas) " of beta", average_phrase(x))),
     label_line("Errors", paste0(x$covariance$phrase, "; t with ", format_df(x$covariance$df), " df")),
+    if (is_moving(x)) beta_error_lines(x),
     sample_lines(x, n_used, unit),
-    label_line("Fit", paste0("mean R2 of a cross-section ", format(x$r_squared, digits = 3)))
+    if (!is.na(x$r_squared)) label_line("Fit", paste0("mean R2 of a cross-section ", format(x$r_squared, digits = 3)))
   )
   invisible(x)
 }
@@ -78,7 +80,7 @@ print.lb_pooled <- function(x, ...) {
 #' summary(price_traits(panel, ret ~ size + value))
 #' @export
 summary.lb_fit <- function(object, ...) {
-  structure(list(fit = object, series = if (inherits(object, "lb_premia")) series_summary(object)), class = "lb_summary")
+  structure(list(fit = object, series = if (inherits(object, "lb_premia") && is.null(object$asset_rows)) series_summary(object)), class = "lb_summary")
 }
 
 series_summary <- function(fit) {

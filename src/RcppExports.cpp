@@ -11,6 +11,56 @@ Rcpp::Rostream<true>&  Rcpp::Rcout = Rcpp::Rcpp_cout_get();
 Rcpp::Rostream<false>& Rcpp::Rcerr = Rcpp::Rcpp_cerr_get();
 #endif
 
+// cpp_corrected_sections
+SEXP cpp_corrected_sections(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, int n_factors, const Rcpp::NumericMatrix& covariance, double min_assets, int threads);
+RcppExport SEXP _lambdabar_cpp_corrected_sections(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP n_factorsSEXP, SEXP covarianceSEXP, SEXP min_assetsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< int >::type n_factors(n_factorsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type covariance(covarianceSEXP);
+    Rcpp::traits::input_parameter< double >::type min_assets(min_assetsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_corrected_sections(design, period, n_periods, n_factors, covariance, min_assets, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_pooled_corrected
+SEXP cpp_pooled_corrected(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, int n_factors, const Rcpp::NumericMatrix& covariance, const Rcpp::IntegerVector& asset, int n_assets, double min_assets, int threads);
+RcppExport SEXP _lambdabar_cpp_pooled_corrected(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP n_factorsSEXP, SEXP covarianceSEXP, SEXP assetSEXP, SEXP n_assetsSEXP, SEXP min_assetsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< int >::type n_factors(n_factorsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type covariance(covarianceSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type asset(assetSEXP);
+    Rcpp::traits::input_parameter< int >::type n_assets(n_assetsSEXP);
+    Rcpp::traits::input_parameter< double >::type min_assets(min_assetsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_pooled_corrected(design, period, n_periods, n_factors, covariance, asset, n_assets, min_assets, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_instrument_sections
+SEXP cpp_instrument_sections(const Rcpp::List& design, const Rcpp::List& other, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::IntegerVector& regressor_half, double min_assets, int threads);
+RcppExport SEXP _lambdabar_cpp_instrument_sections(SEXP designSEXP, SEXP otherSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP regressor_halfSEXP, SEXP min_assetsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type other(otherSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type regressor_half(regressor_halfSEXP);
+    Rcpp::traits::input_parameter< double >::type min_assets(min_assetsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_instrument_sections(design, other, period, n_periods, regressor_half, min_assets, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_sum_series
 SEXP cpp_sum_series(const Eigen::Map<Eigen::MatrixXd>& rows, const Rcpp::IntegerVector& slot, const Eigen::Map<Eigen::VectorXd>& bandwidth_weights, const Rcpp::List& options);
 RcppExport SEXP _lambdabar_cpp_sum_series(SEXP rowsSEXP, SEXP slotSEXP, SEXP bandwidth_weightsSEXP, SEXP optionsSEXP) {
@@ -336,6 +386,9 @@ END_RCPP
 }
 
 static const R_CallMethodDef CallEntries[] = {
+    {"_lambdabar_cpp_corrected_sections", (DL_FUNC) &_lambdabar_cpp_corrected_sections, 7},
+    {"_lambdabar_cpp_pooled_corrected", (DL_FUNC) &_lambdabar_cpp_pooled_corrected, 9},
+    {"_lambdabar_cpp_instrument_sections", (DL_FUNC) &_lambdabar_cpp_instrument_sections, 7},
     {"_lambdabar_cpp_sum_series", (DL_FUNC) &_lambdabar_cpp_sum_series, 4},
     {"_lambdabar_cpp_heteroskedastic", (DL_FUNC) &_lambdabar_cpp_heteroskedastic, 6},
     {"_lambdabar_cpp_clustered", (DL_FUNC) &_lambdabar_cpp_clustered, 8},

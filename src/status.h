@@ -16,6 +16,7 @@ inline Rcpp::CharacterVector status_names(const std::vector<lambdabar::PeriodSta
       case lambdabar::PeriodStatus::rank_deficient: out[t] = "rank_deficient"; break;
       case lambdabar::PeriodStatus::no_variation: out[t] = "no_variation"; break;
       case lambdabar::PeriodStatus::empty: out[t] = "empty"; break;
+      case lambdabar::PeriodStatus::weak_instruments: out[t] = "weak_instruments"; break;
     }
   }
   return out;
