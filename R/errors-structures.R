@@ -225,7 +225,7 @@ format.lb_errors <- function(x, ...) {
     lb_err_eiv = paste0(if (x$form == "shanken") "Shanken" else "estimated betas", ", ", format(x$series)),
     lb_err_misspec = paste0("misspecified model, ", format(x$series)),
     lb_err_moments = paste0("stacked moments, ", format(x$series)),
-    lb_err_assets = paste0("summed over assets", if (!is.null(x$by)) paste0(" by ", x$by), if (x$realised) ", realised premia"),
+    lb_err_assets = paste0("summed over assets", if (!is.null(x$by)) paste0(" by ", x$by), if (x$realised) ", realised premia" else if (inherits(x$series, "lb_err_hac")) paste0(", factors ", format(x$series))),
     lb_err_hetero = paste0("heteroskedastic, ", x$type),
     lb_err_cluster = paste0("clustered by ", first_few(x$ways))
   )

@@ -10,7 +10,7 @@ print.lb_premia <- function(x, ...) {
   }
   cat_lines(
     title,
-    paste0(deparse1(x$formula), if (on_betas) paste0(", betas from ", x$exposure_phrase)),
+    strwrap(paste0(deparse1(x$formula), if (on_betas) paste0(", betas from ", x$exposure_phrase)), line_width()),
     ""
   )
   print_columns(coefficient_table(tidy(x)), right = c("premium", "error", "t", "p", "95% interval"))
