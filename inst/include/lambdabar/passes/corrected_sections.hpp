@@ -142,40 +142,38 @@ inline Matrix unpack(const double* packed, Index n_factors) {
 
 struct Correction {
   double smallest_root = kNaN, kappa = kNaN;
-  Vector change;  // k, to add to the least-squares slopes
-  Matrix map;     // k x k: (A - kappa C)^-1 = map L
+  Matrix L;    // k x k, whitens the slopes' columns
+  Matrix map;  // k x k: (A - kappa C)^-1 = map L
+  Vector g;    // k, to add to the whitened slopes
   double rss = kNaN;
-};
 
-// L: the lower triangle that whitens the slopes' columns. The centre is as long as the
-// variables, y among them.
-inline Matrix slope_whitener(const LeastSquares& fit) {
-  const Index k = fit.centre.size() - 1;
-  return fit.whiten.bottomRightCorner(k, k);
-}
+  Vector slope_change() const { return L.transpose() * g; }
+  // Of the constant. L takes the centre's part in nearly collinear columns out before g
+  // multiplies it.
+  double constant_change(const Vector& centre) const { return -(L * centre).dot(g); }
+};
 
 // fit: of full rank. error_sum: C, K x K.
 inline Correction correct(const LeastSquares& fit,
                           const Matrix& error_sum,
                           double min_reliability) {
-  const Matrix L = slope_whitener(fit);
-  const Index k = L.rows();
-  const Vector q = L.transpose().triangularView<Eigen::Upper>().solve(fit.coef.tail(k));
-  const Index K = error_sum.rows();
-  const Matrix M = L.leftCols(K) * error_sum * L.leftCols(K).transpose();
+  const Index k = fit.centre.size() - 1, K = error_sum.rows();
+  Correction out;
+  out.L = fit.whiten.bottomRightCorner(k, k);
+  const Vector q =
+      out.L.transpose().triangularView<Eigen::Upper>().solve(fit.coef.tail(k));
+  const Matrix M = out.L.leftCols(K) * error_sum * out.L.leftCols(K).transpose();
   const Eigen::SelfAdjointEigenSolver<Matrix> eigen(M);
   const Vector& root = eigen.eigenvalues();
-  Correction out;
   const double largest = root[k - 1];
   out.smallest_root = largest > 0 ? 1 / largest : std::numeric_limits<double>::infinity();
   out.kappa = largest > 0 ? std::min(1.0, (1 - min_reliability) / largest) : 1.0;
   const Vector excess = out.kappa * root.array() / (1 - out.kappa * root.array());
   const Matrix extra =
       eigen.eigenvectors() * excess.asDiagonal() * eigen.eigenvectors().transpose();
-  const Vector g = extra * q;
-  out.change = L.transpose() * g;
-  out.map = L.transpose() + L.transpose() * extra;
-  out.rss = fit.rss + g.squaredNorm();
+  out.g = extra * q;
+  out.map = out.L.transpose() + out.L.transpose() * extra;
+  out.rss = fit.rss + out.g.squaredNorm();
   return out;
 }
 
@@ -276,9 +274,9 @@ class CorrectedSolver {
     Vector variance(design_.n_terms());
     variance.tail(k) = correction.map.rowwise().squaredNorm();
     out_.coef.col(p) = fit.coef;
-    out_.coef.col(p).tail(k) += correction.change;
+    out_.coef.col(p).tail(k) += correction.slope_change();
     if (design_.intercept) {
-      out_.coef(0, p) -= centre.dot(correction.change);
+      out_.coef(0, p) += correction.constant_change(centre);
       variance[0] = 1 / moments_.own.weight[p] +
                     (correction.map.transpose() * centre).squaredNorm();
     }
@@ -506,11 +504,12 @@ class PooledCorrector {
     out.kappa = correction_.kappa;
     out.n_used = moments_.own.n_used[0];
     out.estimate = fit_.coef;
-    out.estimate.tail(k_) += correction_.change;
-    if (design_.intercept) out.estimate[0] -= centre_.dot(correction_.change);
+    const Vector change = correction_.slope_change();
+    out.estimate.tail(k_) += change;
+    if (design_.intercept) out.estimate[0] += correction_.constant_change(centre_);
     AssetScores scores(design_, errors_, n_assets);
     scores.add_all(fit_.centre,
-                   fit_.level - off_centre().dot(correction_.change),
+                   fit_.level - off_centre().dot(change),
                    out.estimate.tail(k_),
                    correction_.kappa,
                    asset);
@@ -529,15 +528,17 @@ class PooledCorrector {
     return ((m.shift.col(0) - fit_.centre) + m.offset.col(0)).tail(k_);
   }
 
+  // Whitened first, so that nearly collinear columns cancel where they are small.
   Matrix influence(const Matrix& scores) const {
-    const Matrix inverse = correction_.map * slope_whitener(fit_);
     const Vector constant = scores.row(0);
+    const Matrix centred =
+        scores.bottomRows(k_).transpose() - constant * off_centre().transpose();
+    const Matrix whitened = centred * correction_.L.transpose();
     Matrix rows(scores.cols(), design_.n_terms());
-    rows.rightCols(k_).noalias() =
-        (scores.bottomRows(k_).transpose() - constant * off_centre().transpose()) *
-        inverse.transpose();
+    rows.rightCols(k_).noalias() = whitened * correction_.map.transpose();
     if (design_.intercept)
-      rows.col(0) = constant / moments_.own.weight[0] - rows.rightCols(k_) * centre_;
+      rows.col(0) = constant / moments_.own.weight[0] -
+                    whitened * (correction_.map.transpose() * centre_);
     return rows;
   }
 

@@ -143,9 +143,8 @@ class PeriodReader {
           return values(a.row, j) < values(b.row, j);
       return false;
     });
-    Vector column(values.rows());
     for (Index j = 0; j < values.cols(); ++j) {
-      column = values.col(j);
+      const Vector column = values.col(j);
       for (std::size_t i = 0; i < keys.size(); ++i)
         values(static_cast<Index>(i), j) = column[keys[i].row];
     }
