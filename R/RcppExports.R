@@ -53,6 +53,14 @@ cpp_alpha_tests <- function(input, kinds, series, slot) {
     .Call(`_lambdabar_cpp_alpha_tests`, input, kinds, series, slot)
 }
 
+cpp_refine_cells <- function(value, reference, cell, n_cells, n_classes) {
+    .Call(`_lambdabar_cpp_refine_cells`, value, reference, cell, n_cells, n_classes)
+}
+
+cpp_cell_means <- function(y, period, n_periods, cell, n_cells) {
+    .Call(`_lambdabar_cpp_cell_means`, y, period, n_periods, cell, n_cells)
+}
+
 cpp_encode <- function(x) {
     .Call(`_lambdabar_cpp_encode`, x)
 }

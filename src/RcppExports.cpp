@@ -194,6 +194,34 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_refine_cells
+Rcpp::IntegerVector cpp_refine_cells(const Rcpp::NumericVector& value, const Rcpp::LogicalVector& reference, const Rcpp::IntegerVector& cell, int n_cells, int n_classes);
+RcppExport SEXP _lambdabar_cpp_refine_cells(SEXP valueSEXP, SEXP referenceSEXP, SEXP cellSEXP, SEXP n_cellsSEXP, SEXP n_classesSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericVector& >::type value(valueSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::LogicalVector& >::type reference(referenceSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type cell(cellSEXP);
+    Rcpp::traits::input_parameter< int >::type n_cells(n_cellsSEXP);
+    Rcpp::traits::input_parameter< int >::type n_classes(n_classesSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_refine_cells(value, reference, cell, n_cells, n_classes));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_cell_means
+Rcpp::List cpp_cell_means(const Rcpp::List& y, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::IntegerVector& cell, int n_cells);
+RcppExport SEXP _lambdabar_cpp_cell_means(SEXP ySEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP cellSEXP, SEXP n_cellsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type y(ySEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type cell(cellSEXP);
+    Rcpp::traits::input_parameter< int >::type n_cells(n_cellsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_cell_means(y, period, n_periods, cell, n_cells));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_encode
 Rcpp::List cpp_encode(SEXP x);
 RcppExport SEXP _lambdabar_cpp_encode(SEXP xSEXP) {
@@ -399,6 +427,8 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_shanken", (DL_FUNC) &_lambdabar_cpp_shanken, 3},
     {"_lambdabar_cpp_alpha_covariance", (DL_FUNC) &_lambdabar_cpp_alpha_covariance, 4},
     {"_lambdabar_cpp_alpha_tests", (DL_FUNC) &_lambdabar_cpp_alpha_tests, 4},
+    {"_lambdabar_cpp_refine_cells", (DL_FUNC) &_lambdabar_cpp_refine_cells, 5},
+    {"_lambdabar_cpp_cell_means", (DL_FUNC) &_lambdabar_cpp_cell_means, 5},
     {"_lambdabar_cpp_encode", (DL_FUNC) &_lambdabar_cpp_encode, 1},
     {"_lambdabar_cpp_relabel", (DL_FUNC) &_lambdabar_cpp_relabel, 2},
     {"_lambdabar_cpp_missing_codes", (DL_FUNC) &_lambdabar_cpp_missing_codes, 2},
