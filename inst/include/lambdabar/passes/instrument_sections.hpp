@@ -24,8 +24,9 @@
 //
 // Shapes: n rows, T periods, P terms (the constant first), K betas. Cost: one read of the
 // columns, two QRs a period: n P^2. Same bits for any number of threads and any order of
-// rows. A term varies when it does so in both halves. Not handled: values whose squares
-// overflow.
+// rows. A term varies when it does so in both halves, R2 is NaN where y does not vary.
+// Weighted columns with a mean of m spreads lose the digits that m has.
+// Not handled: values whose squares overflow.
 #pragma once
 
 #include "cross_sections.hpp"
@@ -40,8 +41,8 @@ namespace lambdabar {
 enum class RegressorHalf : char { zero = 0, one = 1, both = 2 };
 
 struct InstrumentOptions {
-  // Periods below this strength are trimmed. 0 stands for 2 / sqrt(n_t), about the
-  // largest correlation that unrelated betas show.
+  // Periods below this strength are trimmed. 0 stands for 2 / sqrt(n_t), two standard
+  // errors of the correlation of unrelated betas.
   double min_strength = 0;
   // Complete rows a period needs; never fewer than P + 1, which 0 stands for.
   Index min_assets = 0;
@@ -67,6 +68,7 @@ struct TwoHalves {
   Matrix X, Z;  // n x P, of half zero and of half one
   Vector y;
   std::vector<char> varies;  // number of x, in both halves
+  bool y_varies = false;
 };
 
 // Where y, x, the other half's betas and the weight stand among a period's values.
@@ -91,6 +93,7 @@ inline TwoHalves whiten_halves(const Matrix& values, const HalfColumns& at) {
   Vector root = Vector::Ones(n);
   if (at.weighted) root = values.col(at.weight()).cwiseSqrt();
   out.y = root.cwiseProduct(values.col(0));
+  out.y_varies = n > 1 && has_spread(values.col(0));
   out.X.resize(n, at.n_terms());
   out.Z.resize(n, at.n_terms());
   if (at.intercept) out.X.col(0) = out.Z.col(0) = root;
@@ -123,10 +126,10 @@ inline OneWay regress(const Projection& regressors,
 
 struct InstrumentFit {
   Vector coef, std_error;
-  double r_squared = kNaN;
+  double rss = kNaN, tss = kNaN;
 };
 
-// U D V' = Qz'Qx.
+// overlap: U D V' = Qz'Qx.
 inline InstrumentFit fit_instruments(const Projection& px,
                                      const Projection& pz,
                                      const Eigen::JacobiSVD<Matrix>& overlap,
@@ -137,12 +140,9 @@ inline InstrumentFit fit_instruments(const Projection& px,
                          overlap.singularValues().cwiseInverse().asDiagonal() *
                          overlap.matrixU().transpose();
   // The mean is taken out first: it would cost digits, and belongs to the constant alone.
-  Vector level = Vector::Zero(px.C.rows()), centred = y;
-  if (intercept) {
-    const double along = px.Q.col(0).dot(y);
-    level[0] = along / std::sqrt(px.constant_norm2);
-    centred -= along * px.Q.col(0);
-  }
+  const double along = intercept ? px.Q.col(0).dot(y) : 0;
+  Vector centred = y;
+  if (intercept) centred -= along * px.Q.col(0);
   OneWay fit = regress(px, pz, inverse, centred);
   Vector variance = fit.map.rowwise().squaredNorm();
   if (average) {
@@ -153,12 +153,13 @@ inline InstrumentFit fit_instruments(const Projection& px,
     fit.coef = (fit.coef + back.coef) / 2;
     fit.fitted = (fit.fitted + back.fitted) / 2;
   }
-  const double rss = (centred - fit.fitted).squaredNorm(), tss = centred.squaredNorm();
-  const double df = static_cast<double>(y.size() - fit.coef.size());
+  if (intercept) fit.coef[0] += along / std::sqrt(px.constant_norm2);
   InstrumentFit out;
-  out.coef = fit.coef + level;
-  out.std_error = (variance * (rss / df)).cwiseSqrt();
-  if (tss > 0) out.r_squared = 1 - rss / tss;
+  out.coef = fit.coef;
+  out.rss = (centred - fit.fitted).squaredNorm();
+  out.tss = centred.squaredNorm();
+  const double df = static_cast<double>(y.size() - fit.coef.size());
+  out.std_error = (variance * (out.rss / df)).cwiseSqrt();
   return out;
 }
 
@@ -228,7 +229,7 @@ class InstrumentSolver {
     if (!px.usable()) return refuse(at, px);
     const Projection pz = project(std::move(halves.Z), at_.intercept);
     if (!pz.usable()) return refuse(at, pz);
-    store(t, px, pz, halves.y);
+    store(t, px, pz, halves);
   }
 
   // Without a constant only a column of zeros has no spread, which the others span.
@@ -239,7 +240,10 @@ class InstrumentSolver {
     out_.culprit[at] = projection.culprit;
   }
 
-  void store(Index t, const Projection& px, const Projection& pz, const Vector& y) {
+  void store(Index t,
+             const Projection& px,
+             const Projection& pz,
+             const TwoHalves& halves) {
     const std::size_t at = static_cast<std::size_t>(t);
     const Matrix product = pz.Q.transpose() * px.Q;
     const Eigen::JacobiSVD<Matrix> overlap(product,
@@ -247,15 +251,17 @@ class InstrumentSolver {
     out_.strength[t] = std::min(1.0, overlap.singularValues().tail(1)[0]);
     const double least = options_.min_strength > 0
                              ? options_.min_strength
-                             : 2 / std::sqrt(static_cast<double>(y.size()));
+                             : 2 / std::sqrt(static_cast<double>(halves.y.size()));
     out_.status[at] = PeriodStatus::weak_instruments;
     if (!(out_.strength[t] >= std::max(least, kExposureTolerance))) return;
     out_.status[at] = PeriodStatus::estimated;
     const bool average = half_[at] == RegressorHalf::both;
-    const InstrumentFit fit = fit_instruments(px, pz, overlap, y, average, at_.intercept);
+    const InstrumentFit fit =
+        fit_instruments(px, pz, overlap, halves.y, average, at_.intercept);
     out_.coef.col(t) = fit.coef;
     out_.std_error.col(t) = fit.std_error;
-    out_.r_squared[t] = fit.r_squared;
+    const bool y_varies = at_.intercept ? halves.y_varies : fit.tss > 0;
+    if (y_varies) out_.r_squared[t] = 1 - fit.rss / fit.tss;
   }
 
   void refuse_negative_weights() const {
