@@ -107,8 +107,7 @@ last_slots_of_units <- function(panel, own, lag, call) {
 betas_in_use <- function(first_pass, asked, correct, method, call) {
   wanted <- c("beta", "std_error", if (correct == "bias") "covariance", if (method == "wls") "resid_var")
   if (correct != "instruments") {
-    use <- answer_exposures(first_pass, asked, wanted, call = call)
-    return(use)
+    return(answer_exposures(first_pass, asked, wanted, call = call))
   }
   halves <- lapply(0:1, function(half) answer_exposures(first_pass, asked, "beta", half, call)$beta)
   use <- list(halves = halves, beta = (halves[[1L]] + halves[[2L]]) / 2)
@@ -120,21 +119,22 @@ moving_design <- function(panel, formula, first_pass, use, intercept, traits, me
   left <- make_design(panel, stats::as.formula(call("~", formula[[2L]], 1), environment(formula)), call = call)
   traits_design <- trait_design(panel, formula, traits, call)
   factors <- first_pass$terms
-  columns_of <- function(values) {
-    lapply(seq_along(factors), function(k) list(list(x = values, column = k - 1L, table = NULL)))
-  }
   terms <- c(if (intercept) "(Intercept)", factors, traits_design$terms)
   refuse_repeats(terms, "the second pass", call = call)
   weight <- if (method == "wls") list(list(x = 1 / use$resid_var, column = 0L, table = NULL))
   list(
-    y = left$y, x = c(columns_of(use$beta), traits_design$x), weight = weight, intercept = intercept, terms = terms,
+    y = left$y, x = c(beta_columns(use$beta), traits_design$x), weight = weight, intercept = intercept, terms = terms,
     variables = c(
       left$variables, rep("beta", length(factors)), traits_design$variables[-1L],
       if (!is.null(weight)) "residual variance"
     ),
-    formula = formula, other = if (!is.null(use$halves)) columns_of(use$halves[[2L]]),
-    first = if (!is.null(use$halves)) columns_of(use$halves[[1L]])
+    formula = formula
   )
+}
+
+# Design columns that read a matrix of betas in place.
+beta_columns <- function(betas) {
+  lapply(seq_len(ncol(betas)), function(k) list(list(x = betas, column = k - 1L, table = NULL)))
 }
 
 fit_moving_sections <- function(panel, design, use, correct, full, min_assets, call) {
@@ -146,11 +146,11 @@ fit_moving_sections <- function(panel, design, use, correct, full, min_assets, c
     bias = cpp_corrected_sections(design, panel$period, T, K, use$covariance, least, thread_count()),
     instruments = {
       halved <- design
-      halved$x[seq_len(K)] <- design$first
+      halved$x[seq_len(K)] <- beta_columns(use$halves[[1L]])
       # Betas of the whole sample hold the period's own return in one half: the other half
       # must be the instrument then.
       regressor <- if (full) halves(panel)[panel$slot] else rep(2L, T)
-      cpp_instrument_sections(halved, design$other, panel$period, T, regressor, least, thread_count())
+      cpp_instrument_sections(halved, beta_columns(use$halves[[2L]]), panel$period, T, regressor, least, thread_count())
     }
   )
   sections <- row_result(sections, panel, call = call)
@@ -183,7 +183,7 @@ fit_pooled_corrected <- function(panel, design, use, min_assets, call) {
   sections <- list(
     coef = matrix(NA_real_, P, T), std_error = matrix(NA_real_, P, T), r_squared = rep(NA_real_, T),
     n_used = core$n_used_by_period, status = ifelse(core$n_used_by_period > 0, "pooled", "empty"),
-    culprit = rep(NA_integer_, T), from_rows = rep(FALSE, T)
+    culprit = rep(NA_integer_, T)
   )
   used <- which(sections$status == "pooled")
   fit <- new_premia(

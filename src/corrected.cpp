@@ -1,6 +1,6 @@
 #include "convert.h"
 #include "guard.h"
-#include "status.h"
+#include "sections.h"
 #include "views.h"
 
 #include <lambdabar/passes/corrected_sections.hpp>
@@ -22,17 +22,6 @@ lambdabar::CorrectedOptions corrected_options(double min_assets, int threads) {
   options.min_assets = static_cast<Index>(min_assets);
   options.threads = threads;
   return options;
-}
-
-template <class Sections>
-Rcpp::List section_list(const Sections& fit) {
-  return Rcpp::List::create(Rcpp::_["coef"] = fit.coef,
-                            Rcpp::_["std_error"] = fit.std_error,
-                            Rcpp::_["r_squared"] = fit.r_squared,
-                            Rcpp::_["n_used"] = as_numeric(fit.n_used),
-                            Rcpp::_["status"] = status_names(fit.status),
-                            Rcpp::_["culprit"] = one_based_or_na(fit.culprit),
-                            Rcpp::_["varies"] = as_logical(fit.varies));
 }
 
 }  // namespace

@@ -1,7 +1,7 @@
 #include "convert.h"
 #include "guard.h"
 #include "pooled_fit.h"
-#include "status.h"
+#include "sections.h"
 #include "views.h"
 
 #include <lambdabar/passes/average.hpp>
@@ -21,14 +21,9 @@ SEXP cpp_cross_sections(const Rcpp::List& design,
     options.min_assets = static_cast<Index>(min_assets);
     options.threads = threads;
     const auto fit = lambdabar::cross_sections(view_design(design, period, n_periods), options);
-    return Rcpp::List::create(Rcpp::_["coef"] = fit.coef,
-                              Rcpp::_["std_error"] = fit.std_error,
-                              Rcpp::_["r_squared"] = fit.r_squared,
-                              Rcpp::_["n_used"] = as_numeric(fit.n_used),
-                              Rcpp::_["status"] = status_names(fit.status),
-                              Rcpp::_["culprit"] = one_based_or_na(fit.culprit),
-                              Rcpp::_["from_rows"] = as_logical(fit.from_rows),
-                              Rcpp::_["varies"] = as_logical(fit.varies));
+    Rcpp::List out = section_list(fit);
+    out["from_rows"] = as_logical(fit.from_rows);
+    return out;
   });
 }
 

@@ -1,13 +1,13 @@
 # Computes what the vignette sp500-members shows; see there. The data are not part of the
 # package: this needs the CRAN packages qrmdata and xts, and lambdabar itself.
-#   Rscript tools/sp500.R vignettes/sp500-members.rds
+#   Rscript tools/sp500.R vignettes/sp500-members.txt
 
 suppressPackageStartupMessages({
   library(lambdabar)
   library(xts)
 })
 file <- commandArgs(trailingOnly = TRUE)[1L]
-if (is.na(file)) stop("give the file to write, such as vignettes/sp500-members.rds")
+if (is.na(file)) stop("give the file to write, such as vignettes/sp500-members.txt")
 
 data(SP500_const, SP500, package = "qrmdata")
 as_matrix <- function(x) matrix(as.numeric(x), nrow(x), dimnames = list(NULL, colnames(x)))
@@ -37,12 +37,12 @@ rows <- function(fit) generics::tidy(fit)[2L, c("estimate", "std.error", "statis
 result <- list(
   daily = shown(daily), odd = shown(panel_health(daily)), betas = shown(betas), seconds = clock[["elapsed"]],
   naive = shown(naive), corrected = shown(corrected),
-  side_by_side = cbind(
+  side_by_side = data.frame(
     remedy = c("none", "bias", "instruments", "bias, one lag of the index"),
     do.call(rbind, lapply(list(naive, corrected, instruments, with_lag), rows))
   ),
   mean_index = mean(simple_returns(cbind(level[last]))[, 1L]), versions = as.character(packageVersion("qrmdata"))
 )
 draft <- paste0(file, ".part")
-saveRDS(result, draft, version = 2)
+dput(result, draft)
 invisible(file.rename(draft, file))

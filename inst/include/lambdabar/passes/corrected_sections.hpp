@@ -63,17 +63,10 @@ struct CorrectedOptions {
   int threads = 1;
 };
 
-struct CorrectedSections {
-  Matrix coef;                       // P x T, NaN unless estimated
-  Matrix std_error;                  // P x T, NaN unless estimated
-  Vector r_squared;                  // T; may be below zero
-  std::vector<Index> n_rows;         // T
-  std::vector<Index> n_used;         // T, complete rows
-  std::vector<PeriodStatus> status;  // T
-  std::vector<Index> culprit;        // T, as in CrossSections
-  Vector smallest_root;      // T: mu, infinite without error; NaN unless estimated
-  Vector kappa;              // T: share of C subtracted; NaN unless estimated
-  std::vector<bool> varies;  // P, as in CrossSections
+// R2 may be below zero.
+struct CorrectedSections : SectionResults {
+  Vector smallest_root;  // T: mu, infinite without error; NaN unless estimated
+  Vector kappa;          // T: share of C subtracted; NaN unless estimated
 };
 
 namespace detail {
@@ -124,14 +117,14 @@ struct ErrorMoments {
     // A packed triangle by rows starts with the triangle of its first variables.
     own.cross = own.cross.topRows(q * (q + 1) / 2).eval();
   }
-
-  // Means of the x, or zeros where columns are not centred.
-  Vector centre(Index period, bool intercept) const {
-    const Index k = own.n_variables - 1;
-    if (!intercept) return Vector::Zero(k);
-    return (own.shift.col(period) + own.offset.col(period)).tail(k);
-  }
 };
+
+// Means of the x, or zeros where columns are not centred.
+inline Vector centre_of(const Moments& m, Index period, bool intercept) {
+  const Index k = m.n_variables - 1;
+  if (!intercept) return Vector::Zero(k);
+  return (m.shift.col(period) + m.offset.col(period)).tail(k);
+}
 
 inline Matrix unpack(const double* packed, Index n_factors) {
   Matrix V(n_factors, n_factors);
@@ -177,140 +170,60 @@ inline Correction correct(const LeastSquares& fit,
   return out;
 }
 
-class CorrectedSolver {
+class CorrectedSolver : public SectionSolver<CorrectedSections> {
  public:
   CorrectedSolver(const Design& design,
                   const BetaErrors& errors,
                   const CorrectedOptions& options)
-      : design_(design),
-        errors_(errors),
-        options_(options),
-        needed_(std::max(options.min_assets, design.n_terms() + 1)),
-        moments_(
-            design, errors, period_moments(with_errors(design, errors), options.threads)),
-        to_rows_(moments_.own.n_used.size(), 0) {
-    prepare();
-  }
-
-  CorrectedSections solve() {
-    const Index n_periods = moments_.own.n_periods();
-    for_each_task(n_periods, options_.threads, [&](Index p) { solve_period(p); });
-    solve_from_rows();
-    find_variation();
-    return std::move(out_);
-  }
+      : CorrectedSolver(
+            design,
+            errors,
+            options,
+            ErrorMoments(design,
+                         errors,
+                         period_moments(with_errors(design, errors), options.threads))) {}
 
  private:
-  void prepare() {
-    const Index n_terms = design_.n_terms(), n_periods = moments_.own.n_periods();
-    const std::size_t size = static_cast<std::size_t>(n_periods);
-    out_.coef = out_.std_error = Matrix::Constant(n_terms, n_periods, kNaN);
-    out_.r_squared = out_.smallest_root = out_.kappa = Vector::Constant(n_periods, kNaN);
-    out_.n_rows = moments_.own.n_rows;
-    out_.n_used = moments_.own.n_used;
-    out_.status.assign(size, PeriodStatus::empty);
-    out_.culprit.assign(size, -1);
+  CorrectedSolver(const Design& design,
+                  const BetaErrors& errors,
+                  const CorrectedOptions& options,
+                  ErrorMoments moments)
+      : SectionSolver(
+            design, options.min_assets, options.threads, std::move(moments.own)),
+        errors_(errors),
+        error_sum_(std::move(moments.error_sum)),
+        min_reliability_(options.min_reliability) {
+    out_.smallest_root = out_.kappa = Vector::Constant(moments_.n_periods(), kNaN);
   }
 
-  void solve_period(Index p) {
-    const std::size_t at = static_cast<std::size_t>(p);
-    const Index n = moments_.own.n_used[at];
-    if (n == 0) return;
-    out_.status[at] = PeriodStatus::too_few_assets;
-    if (n < needed_) return;
-    if (design_.intercept) {
-      for (Index j = 1; j < moments_.own.n_variables; ++j) {
-        if (varies_in(moments_.own, j, p)) continue;
-        out_.status[at] = PeriodStatus::no_variation;
-        out_.culprit[at] = j;
-        return;
-      }
-    }
-    const LeastSquares fit = solve_moments(moments_.own, p, design_.intercept);
-    if (fit.trusted) {
-      store(p, fit);
-    } else {
-      to_rows_[at] = 1;
-    }
-  }
-
-  void solve_from_rows() {
-    std::vector<Index> periods;
-    for (std::size_t p = 0; p < to_rows_.size(); ++p)
-      if (to_rows_[p]) periods.push_back(static_cast<Index>(p));
-    PeriodRows rows(design_, moments_.own);
-    for (std::size_t from = 0; from < periods.size();) {
-      const std::size_t n = rows.batch(periods, from);
-      rows.gather(periods, from, n);
-      for_each_task(static_cast<Index>(n), options_.threads, [&](Index i) {
-        factor_period(rows, periods[from + static_cast<std::size_t>(i)]);
-      });
-      from += n;
-    }
-  }
-
-  void factor_period(const PeriodRows& rows, Index p) {
-    RowFactor factor(design_, factor_centre(moments_.own, p, design_.intercept));
-    for (Index i = 0; i < rows.count(p); ++i) {
-      const Index row = rows.row(p, i);
-      if (has_errors(errors_, design_.n_rows, row)) factor.add(row);
-    }
-    const LeastSquares fit = factor.solve();
-    if (fit.rank == design_.n_terms()) return store(p, fit);
-    out_.status[static_cast<std::size_t>(p)] = PeriodStatus::rank_deficient;
-    Index last = design_.n_terms() - 1;
-    while (!fit.aliased[static_cast<std::size_t>(last)]) --last;
-    out_.culprit[static_cast<std::size_t>(p)] = last;
-  }
-
-  void store(Index p, const LeastSquares& fit) {
-    const std::size_t at = static_cast<std::size_t>(p);
-    const Index k = moments_.own.n_variables - 1;
-    const Correction correction =
-        correct(fit,
-                unpack(moments_.error_sum.col(p).data(), errors_.n_factors),
-                options_.min_reliability);
-    const Vector centre = moments_.centre(p, design_.intercept);
+  void store(Index p, const LeastSquares& fit) override {
+    const Index k = moments_.n_variables - 1;
+    const Correction correction = correct(
+        fit, unpack(error_sum_.col(p).data(), errors_.n_factors), min_reliability_);
     Vector variance(design_.n_terms());
     variance.tail(k) = correction.map.rowwise().squaredNorm();
     out_.coef.col(p) = fit.coef;
     out_.coef.col(p).tail(k) += correction.slope_change();
     if (design_.intercept) {
+      const Vector centre = centre_of(moments_, p, true);
       out_.coef(0, p) += correction.constant_change(centre);
-      variance[0] = 1 / moments_.own.weight[p] +
-                    (correction.map.transpose() * centre).squaredNorm();
+      variance[0] =
+          1 / moments_.weight[p] + (correction.map.transpose() * centre).squaredNorm();
     }
-    const Index df = moments_.own.n_used[at] - design_.n_terms();
-    out_.status[at] = PeriodStatus::estimated;
     out_.std_error.col(p) =
-        (variance * (correction.rss / static_cast<double>(df))).cwiseSqrt();
-    const bool y_varies = design_.intercept ? varies_in(moments_.own, 0, p) : fit.tss > 0;
-    if (y_varies) out_.r_squared[p] = 1 - correction.rss / fit.tss;
+        (variance * residual_variance(p, correction.rss)).cwiseSqrt();
+    out_.r_squared[p] = r_squared(p, correction.rss, fit.tss);
     out_.smallest_root[p] = correction.smallest_root;
     out_.kappa[p] = correction.kappa;
   }
 
-  bool varies_somewhere(Index variable) const {
-    for (Index p = 0; p < moments_.own.n_periods(); ++p) {
-      if (moments_.own.n_used[static_cast<std::size_t>(p)] < 2) continue;
-      if (varies_in(moments_.own, variable, p)) return true;
-    }
-    return false;
+  bool counts(Index row) const override {
+    return has_errors(errors_, design_.n_rows, row);
   }
 
-  void find_variation() {
-    if (design_.intercept) out_.varies.push_back(true);
-    for (Index j = 1; j < moments_.own.n_variables; ++j)
-      out_.varies.push_back(varies_somewhere(j));
-  }
-
-  const Design& design_;
   const BetaErrors& errors_;
-  const CorrectedOptions& options_;
-  Index needed_;
-  ErrorMoments moments_;
-  std::vector<char> to_rows_;  // bytes, because tasks write neighbours at the same time
-  CorrectedSections out_;
+  Matrix error_sum_;  // K (K + 1) / 2 x T
+  double min_reliability_;
 };
 
 }  // namespace detail
@@ -370,8 +283,7 @@ inline void require_variation(const Moments& m) {
 }
 
 inline void require_full_rank(const LeastSquares& fit) {
-  Index last = static_cast<Index>(fit.aliased.size()) - 1;
-  while (last >= 0 && !fit.aliased[static_cast<std::size_t>(last)]) --last;
+  const Index last = fit.last_aliased();
   if (last < 0) return;
   throw Error("rank",
               "a term is a combination of the terms before it",
@@ -495,7 +407,7 @@ class PooledCorrector {
     correction_ = correct(fit_,
                           unpack(moments_.error_sum.data(), errors.n_factors),
                           options.min_reliability);
-    centre_ = moments_.centre(0, design.intercept);
+    centre_ = centre_of(moments_.own, 0, design.intercept);
   }
 
   PooledCorrected solve(const int* asset, Index n_assets) const {

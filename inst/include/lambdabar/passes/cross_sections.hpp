@@ -26,24 +26,39 @@ struct CrossSectionOptions {
   int threads = 1;
 };
 
-struct CrossSections {
+// What every kind of cross-section reports: P terms, T periods.
+struct SectionResults {
   Matrix coef;                       // P x T, NaN unless estimated
-  Matrix std_error;                  // P x T, classical, NaN unless estimated
+  Matrix std_error;                  // P x T, NaN unless estimated
   Vector r_squared;                  // T; centred with a constant, else around zero
-  Vector rss, tss;                   // T; weighted when the design is
   std::vector<Index> n_rows;         // T
   std::vector<Index> n_used;         // T, complete rows
   std::vector<PeriodStatus> status;  // T
   // T: the term that has no variation (the first such) or lies in the span of terms
   // before it (the last such); 0 is the constant if there is one; -1 otherwise.
   std::vector<Index> culprit;
+  // P: the term varies inside at least one period of two or more complete rows. True for
+  // the constant. Judged alike with and without a constant.
+  std::vector<bool> varies;
+
+  void prepare(Index n_terms, Index n_periods) {
+    const std::size_t size = static_cast<std::size_t>(n_periods);
+    coef = std_error = Matrix::Constant(n_terms, n_periods, kNaN);
+    r_squared = Vector::Constant(n_periods, kNaN);
+    n_rows.assign(size, 0);
+    n_used.assign(size, 0);
+    status.assign(size, PeriodStatus::empty);
+    culprit.assign(size, -1);
+  }
+};
+
+// Errors are classical.
+struct CrossSections : SectionResults {
+  Vector rss, tss;  // T; weighted when the design is
   // n_variables() x T: incomplete rows by the first offending variable in the order y,
   // x, weight. A zero weight counts under weight.
   Eigen::Matrix<Index, Eigen::Dynamic, Eigen::Dynamic> missing;
   std::vector<bool> from_rows;  // T: the period went back to its rows
-  // P: the term varies inside at least one period of two or more complete rows. True for
-  // the constant. Judged alike with and without a constant.
-  std::vector<bool> varies;
 };
 
 namespace detail {
@@ -107,18 +122,14 @@ class PeriodRows {
   std::vector<Index> begin_, list_;
 };
 
-class CrossSectionSolver {
+// One period after the other through its moments, or back to its rows. What is kept of a
+// fit, and which rows count on the way back, is the derived solver's.
+template <class Results>
+class SectionSolver {
  public:
-  CrossSectionSolver(const Design& design, const CrossSectionOptions& options)
-      : design_(design),
-        threads_(options.threads),
-        needed_(std::max(options.min_assets, design.n_terms() + 1)),
-        moments_(period_moments(design, options.threads)),
-        to_rows_(moments_.n_used.size(), 0) {
-    prepare();
-  }
+  virtual ~SectionSolver() = default;
 
-  CrossSections solve() {
+  Results solve() {
     const Index n_periods = moments_.n_periods();
     const Index n_tasks = (n_periods + kPeriodsPerTask - 1) / kPeriodsPerTask;
     for_each_task(n_tasks, threads_, [&](Index task) {
@@ -127,23 +138,41 @@ class CrossSectionSolver {
     });
     solve_from_rows();
     find_variation();
-    out_.from_rows.assign(to_rows_.begin(), to_rows_.end());
     return std::move(out_);
   }
 
- private:
-  void prepare() {
-    const Index n_terms = design_.n_terms(), n_periods = moments_.n_periods();
-    const std::size_t size = static_cast<std::size_t>(n_periods);
-    out_.coef = out_.std_error = Matrix::Constant(n_terms, n_periods, kNaN);
-    out_.r_squared = out_.rss = out_.tss = Vector::Constant(n_periods, kNaN);
+ protected:
+  SectionSolver(const Design& design, Index min_assets, int threads, Moments moments)
+      : design_(design),
+        moments_(std::move(moments)),
+        to_rows_(moments_.n_used.size(), 0),
+        threads_(threads),
+        needed_(std::max(min_assets, design.n_terms() + 1)) {
+    out_.prepare(design.n_terms(), moments_.n_periods());
     out_.n_rows = moments_.n_rows;
     out_.n_used = moments_.n_used;
-    out_.missing = moments_.missing;
-    out_.status.assign(size, PeriodStatus::empty);
-    out_.culprit.assign(size, -1);
   }
 
+  // fit has full rank.
+  virtual void store(Index period, const LeastSquares& fit) = 0;
+  virtual bool counts(Index row) const = 0;
+
+  double r_squared(Index p, double rss, double tss) const {
+    const bool y_varies = design_.intercept ? varies_in(moments_, 0, p) : tss > 0;
+    return y_varies ? 1 - rss / tss : kNaN;
+  }
+
+  double residual_variance(Index p, double rss) const {
+    const Index n = moments_.n_used[static_cast<std::size_t>(p)];
+    return rss / static_cast<double>(n - design_.n_terms());
+  }
+
+  const Design& design_;
+  Moments moments_;
+  std::vector<char> to_rows_;  // bytes, because tasks write neighbours at the same time
+  Results out_;
+
+ private:
   // Outcome of a period as far as its moments tell; marks it if rows are needed.
   void solve_period(Index p) {
     const std::size_t at = static_cast<std::size_t>(p);
@@ -158,10 +187,15 @@ class CrossSectionSolver {
     }
     const LeastSquares fit = solve_moments(moments_, p, design_.intercept);
     if (fit.trusted) {
-      store(p, fit);
+      keep(p, fit);
     } else {
       to_rows_[at] = 1;
     }
+  }
+
+  void keep(Index p, const LeastSquares& fit) {
+    out_.status[static_cast<std::size_t>(p)] = PeriodStatus::estimated;
+    store(p, fit);
   }
 
   Index first_without_variation(Index p) const {
@@ -189,48 +223,63 @@ class CrossSectionSolver {
 
   void factor_period(const PeriodRows& rows, Index p) {
     RowFactor factor(design_, factor_centre(moments_, p, design_.intercept));
-    for (Index i = 0; i < rows.count(p); ++i) factor.add(rows.row(p, i));
+    for (Index i = 0; i < rows.count(p); ++i) {
+      const Index row = rows.row(p, i);
+      if (counts(row)) factor.add(row);
+    }
     const LeastSquares fit = factor.solve();
-    if (fit.rank == design_.n_terms()) return store(p, fit);
+    if (fit.rank == design_.n_terms()) return keep(p, fit);
     out_.status[static_cast<std::size_t>(p)] = PeriodStatus::rank_deficient;
-    Index last = design_.n_terms() - 1;
-    while (!fit.aliased[static_cast<std::size_t>(last)]) --last;
-    out_.culprit[static_cast<std::size_t>(p)] = last;
+    out_.culprit[static_cast<std::size_t>(p)] = fit.last_aliased();
   }
 
-  void store(Index p, const LeastSquares& fit) {
-    const std::size_t at = static_cast<std::size_t>(p);
-    const Index df = moments_.n_used[at] - design_.n_terms();
-    out_.status[at] = PeriodStatus::estimated;
-    out_.coef.col(p) = fit.coef;
-    out_.std_error.col(p) =
-        (fit.bread.diagonal() * (fit.rss / static_cast<double>(df))).cwiseSqrt();
-    out_.rss[p] = fit.rss;
-    out_.tss[p] = fit.tss;
-    const bool y_varies = design_.intercept ? varies_in(moments_, 0, p) : fit.tss > 0;
-    if (y_varies) out_.r_squared[p] = 1 - fit.rss / fit.tss;
+  bool varies_somewhere(Index variable) const {
+    for (Index p = 0; p < moments_.n_periods(); ++p) {
+      if (moments_.n_used[static_cast<std::size_t>(p)] < 2) continue;
+      if (varies_in(moments_, variable, p)) return true;
+    }
+    return false;
   }
 
   void find_variation() {
-    const Index first = design_.intercept ? 1 : 0;
-    out_.varies.assign(static_cast<std::size_t>(design_.n_terms()), false);
-    if (design_.intercept) out_.varies[0] = true;
-    for (Index j = 1; j < moments_.n_variables; ++j) {
-      for (Index p = 0; p < moments_.n_periods(); ++p) {
-        if (moments_.n_used[static_cast<std::size_t>(p)] < 2) continue;
-        if (!varies_in(moments_, j, p)) continue;
-        out_.varies[static_cast<std::size_t>(first + j - 1)] = true;
-        break;
-      }
-    }
+    if (design_.intercept) out_.varies.push_back(true);
+    for (Index j = 1; j < moments_.n_variables; ++j)
+      out_.varies.push_back(varies_somewhere(j));
   }
 
-  const Design& design_;
   int threads_;
   Index needed_;
-  Moments moments_;
-  std::vector<char> to_rows_;  // bytes, because tasks write neighbours at the same time
-  CrossSections out_;
+};
+
+class CrossSectionSolver : public SectionSolver<CrossSections> {
+ public:
+  CrossSectionSolver(const Design& design, const CrossSectionOptions& options)
+      : SectionSolver(design,
+                      options.min_assets,
+                      options.threads,
+                      period_moments(design, options.threads)) {
+    out_.rss = out_.tss = Vector::Constant(moments_.n_periods(), kNaN);
+    out_.missing = moments_.missing;
+  }
+
+  CrossSections solve() {
+    CrossSections out = SectionSolver::solve();
+    out.from_rows.assign(to_rows_.begin(), to_rows_.end());
+    return out;
+  }
+
+ private:
+  void store(Index p, const LeastSquares& fit) override {
+    out_.coef.col(p) = fit.coef;
+    out_.std_error.col(p) =
+        (fit.bread.diagonal() * residual_variance(p, fit.rss)).cwiseSqrt();
+    out_.rss[p] = fit.rss;
+    out_.tss[p] = fit.tss;
+    out_.r_squared[p] = r_squared(p, fit.rss, fit.tss);
+  }
+
+  // The factor leaves incomplete rows out by itself.
+  bool counts(Index) const override { return true; }
 };
 
 }  // namespace detail

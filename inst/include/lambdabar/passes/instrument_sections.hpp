@@ -49,16 +49,8 @@ struct InstrumentOptions {
   int threads = 1;
 };
 
-struct InstrumentSections {
-  Matrix coef;                       // P x T, NaN unless estimated
-  Matrix std_error;                  // P x T, NaN unless estimated
-  Vector r_squared;                  // T; may be below zero
-  std::vector<Index> n_rows;         // T
-  std::vector<Index> n_used;         // T, rows complete with the betas of both halves
-  std::vector<PeriodStatus> status;  // T
-  std::vector<Index> culprit;        // T, as in CrossSections, of either half
-  Vector strength;                   // T, also of trimmed periods; NaN where not known
-  std::vector<bool> varies;          // P
+struct InstrumentSections : SectionResults {
+  Vector strength;  // T: smallest canonical correlation, also of trimmed periods
 };
 
 namespace detail {
@@ -178,7 +170,11 @@ class InstrumentSolver {
             design.intercept},
         rows_(design),
         reader_(rows_, columns_of(design, other), at_.weighted) {
-    prepare(design.n_terms(), design.n_periods);
+    const std::size_t size = static_cast<std::size_t>(design.n_periods);
+    out_.prepare(design.n_terms(), design.n_periods);
+    out_.strength = Vector::Constant(design.n_periods, kNaN);
+    varies_.resize(size);
+    negative_row_.assign(size, -1);
   }
 
   InstrumentSections solve() {
@@ -199,18 +195,6 @@ class InstrumentSolver {
     for (const auto* group : {&design.x, &other, &design.weight})
       for (const Column& column : *group) columns.push_back(&column);
     return columns;
-  }
-
-  void prepare(Index n_terms, Index n_periods) {
-    const std::size_t size = static_cast<std::size_t>(n_periods);
-    out_.coef = out_.std_error = Matrix::Constant(n_terms, n_periods, kNaN);
-    out_.r_squared = out_.strength = Vector::Constant(n_periods, kNaN);
-    out_.n_rows.assign(size, 0);
-    out_.n_used.assign(size, 0);
-    out_.status.assign(size, PeriodStatus::empty);
-    out_.culprit.assign(size, -1);
-    varies_.resize(size);
-    negative_row_.assign(size, -1);
   }
 
   void solve_period(Index t, const PeriodValues& period) {

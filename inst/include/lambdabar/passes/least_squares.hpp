@@ -45,6 +45,13 @@ struct LeastSquares {
   Matrix bread;   // r x r, for the kept terms as the user wrote them
   double rss = kNaN;
   double tss = kNaN;  // around the mean with a constant, around zero without
+
+  // The last term in the span of earlier ones, -1 when there is none.
+  Index last_aliased() const {
+    Index last = static_cast<Index>(aliased.size()) - 1;
+    while (last >= 0 && !aliased[static_cast<std::size_t>(last)]) --last;
+    return last;
+  }
 };
 
 namespace detail {
