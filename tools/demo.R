@@ -1,5 +1,5 @@
 # The main job on the invented market: health, premia on characteristics, the error ladder,
-# premia on factor exposures, joint tests.
+# premia on factor exposures that stay and that move, joint tests.
 library(lambdabar)
 
 heading <- function(text) cat("\n", text, "\n", strrep("-", nchar(text)), "\n\n", sep = "")
@@ -27,7 +27,15 @@ print(error_ladder(traits, terms = c("size", "value")))
 heading("4  What do factor exposures earn? 400 firms, ragged")
 print(price_factors(panel, ret ~ mkt + smb, errors = err_eiv("robust")))
 
-heading("5  The same on 16 portfolios, and joint tests of the pricing errors")
+heading("5  Betas that move, corrected for their own error")
+betas_by_month <- exposures(panel, ret ~ mkt, window = window_rolling(60, min_obs = 24))
+print(betas_by_month)
+for (correct in c("none", "bias")) {
+  cat("\n")
+  print(price_factors(panel, ret ~ mkt, exposure = betas_by_month, correct = correct))
+}
+
+heading("6  Premia on exposures of 16 portfolios, and joint tests of the pricing errors")
 # Firms are sorted by their betas in the first half of the sample and held in the second, so
 # that the sort sees nothing of the returns it is tested on.
 half <- 201312
