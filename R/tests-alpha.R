@@ -45,18 +45,8 @@
 #' @export
 alpha_test <- function(fit, kind = c("averaged", "corrected", "f_approx", "grs", "moments"),
                        series = err_iid()) {
-  check_fit(fit)
   check_series(series)
-  if (!is_two_pass(fit) || !fit$balanced) {
-    abort_unsupported(c(
-      "Joint tests of pricing errors need a fit of {.fn price_factors} on a complete panel without traits.",
-      i = if (is_two_pass(fit)) {
-        "Here {if (length(fit$traits_design$terms)) 'traits stand beside the betas' else 'some returns are missing'}; a subset of assets and periods without holes can be tested."
-      } else {
-        "For restrictions on premia use {.fn term_test}."
-      }
-    ))
-  }
+  check_complete_fit(fit, "Joint tests of pricing errors", "For restrictions on premia use {.fn term_test}.")
   unknown <- setdiff(kind, alpha_kinds())
   if (!is.character(kind) || !length(kind) || length(unknown)) {
     abort_input("{.arg kind} must be some of {.val {alpha_kinds()}}.")
@@ -82,6 +72,27 @@ alpha_test <- function(fit, kind = c("averaged", "corrected", "f_approx", "grs",
     ),
     subtitle = if (any(kind %in% c("averaged", "moments", "grs_moments"))) paste0("Sum over periods: ", format(series)),
     reading = alpha_reading(kind, p)
+  )
+}
+
+# For what needs all assets in all periods, with one set of betas: `what` (a plural) opens the
+# sentence.
+check_complete_fit <- function(fit, what, advice = NULL, call = rlang::caller_env()) {
+  check_fit(fit, call)
+  if (is_two_pass(fit) && fit$balanced) {
+    return(invisible(fit))
+  }
+  reason <- if (is_two_pass(fit)) {
+    paste0(
+      "Here ", if (length(fit$traits_design$terms)) "traits stand beside the betas" else "some returns are missing",
+      "; a subset of assets and periods without holes can be tested."
+    )
+  } else {
+    advice
+  }
+  abort_unsupported(
+    c(paste(what, "need a fit of {.fn price_factors} with betas of the full sample, on a complete panel without traits."), i = reason),
+    call = call
   )
 }
 
