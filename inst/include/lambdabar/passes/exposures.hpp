@@ -17,15 +17,16 @@
 // `length` slots: aggregates from the left and from the right inside each, any window is the
 // tail of one merged with the head of the next. Nothing is ever subtracted. A window whose
 // cross-products are close to singular, or whose fit is close to exact, is solved from its
-// rows. Memory: O(length K^2) a thread, and 4 bytes a row when rows are not by asset.
+// rows; all others are solved side by side (window_solve.hpp). Memory: O(length K^2) a
+// thread, and 4 bytes a row when rows are not by asset.
 #pragma once
 
 #include "../panel/asset_rows.hpp"
 #include "../panel/design.hpp"
 #include "../parallel.hpp"
-#include "aggregates.hpp"
 #include "lead_lag.hpp"
 #include "window_fit.hpp"
+#include "window_solve.hpp"
 
 #include <optional>
 
@@ -76,9 +77,6 @@ struct ExposureColumns {
 };
 
 namespace detail {
-
-// Below this share of a variable's own sum of squares a pivot has lost five digits.
-inline constexpr double kWindowPivot = 1e-5;
 
 // The usable rows of one asset, in the order of time.
 struct AssetSeries {
@@ -174,18 +172,27 @@ class WindowWalk {
         shift_(shape_.n_variables()),
         head_(shape_.size()),
         squares_(shape_.size()),
-        window_(shape_.size()),
-        triangle_(packed_size(shape_.n_factors())),
-        inverse_(packed_size(shape_.n_factors())) {
+        mean_(shape_.n_variables()),
+        products_(packed_size(shape_.n_variables())),
+        solver_(shape_.n_factors()),
+        lane_products_(packed_size(shape_.n_variables())),
+        lane_means_(shape_.n_variables()),
+        lane_solver_(shape_.n_factors()) {
     const auto K = static_cast<std::size_t>(shape_.n_factors());
     estimate_.beta.resize(K);
     estimate_.covariance.resize(K * (K + 1) / 2);
+    const WindowKind kind = plan.options.window;
+    in_lanes_ = (kind == WindowKind::rolling || kind == WindowKind::expanding) &&
+                plan.n_factors == plan.n_regressors;
+    std::fill_n(lane_products_.data(), packed_size(shape_.n_variables()), WindowLanes(0.0));
+    std::fill_n(lane_means_.data(), shape_.n_variables(), WindowLanes(0.0));
+    lane_n_.setZero();
   }
 
   void start(const AssetSeries& series) {
     series_ = &series;
     next_ = first_ = tail_begin_ = tail_end_ = 0;
-    block_ = -1;
+    block_end_ = 0;
     last_end_ = -1;
     wanted_ = 0;
     shape_.clear(head_.data());
@@ -197,6 +204,11 @@ class WindowWalk {
   // Ends never fall from one call to the next.
   void answer(int last_slot, Index row) {
     const int end = std::min(last_slot, plan_.n_slots - 1) - plan_.leads;
+    if (in_lanes_) {
+      advance(end);
+      stage(row);
+      return;
+    }
     if (!answered_ || end != last_end_) {
       advance(end);
       last_end_ = end;
@@ -205,6 +217,11 @@ class WindowWalk {
       combine(std::min(last_slot, plan_.n_slots - 1));
     }
     store(row);
+  }
+
+  // After the last query of the asset.
+  void finish() {
+    if (staged_ > 0) solve_staged();
   }
 
  private:
@@ -237,7 +254,7 @@ class WindowWalk {
   void push_head(double w) {
     if (shape_.weight(head_.data()) == 0.0) set_anchor(next_, head_anchor_.data());
     read(next_, head_anchor_.data(), row_.data());
-    shape_.push(head_.data(), row_.data(), w);
+    shape_.push(head_.data(), row_.data(), w, head_.data());
   }
 
   void advance_expanding(int end) {
@@ -249,9 +266,7 @@ class WindowWalk {
   // the last row, since a common factor cancels.
   void advance_decay(int end) {
     for (; next_ < series().size() && series().slot[next_] <= end; ++next_) {
-      if (next_ == 0) {
-        set_anchor(0, head_anchor_.data());
-      } else {
+      if (next_ > 0) {
         const double kept =
             std::pow(plan_.decay, series().slot[next_] - series().slot[next_ - 1]);
         shape_.scale(head_.data(), kept);
@@ -260,9 +275,9 @@ class WindowWalk {
         // The anchor follows the series, else one far row would cost digits for ever.
         if (next_ % 64 == 0) move_anchor();
       }
+      push_head(series().weight[next_]);
       read(next_, head_anchor_.data(), row_.data());
-      shape_.push(head_.data(), row_.data(), series().weight[next_]);
-      shape_.push(squares_.data(), row_.data(), series().weight[next_]);
+      shape_.push(squares_.data(), row_.data(), series().weight[next_], squares_.data());
       wanted_ += 1.0;
     }
   }
@@ -279,7 +294,7 @@ class WindowWalk {
 
   void advance_rolling(int end) {
     if (end < 0) return;
-    if (end / plan_.length != block_) enter_block(end / plan_.length);
+    if (end >= block_end_) enter_block(end / plan_.length);
     for (; next_ < series().size() && series().slot[next_] <= end; ++next_)
       push_head(series().weight[next_]);
     const int begin = end - plan_.length + 1;
@@ -298,17 +313,18 @@ class WindowWalk {
     tails_.resize((tail_end_ - tail_begin_) * size);
     for (std::size_t i = tail_end_; i > tail_begin_; --i) {
       double* tail = tail_at(i - 1);
+      const double* later = tail;
       if (i == tail_end_) {
         set_anchor(i - 1, tail_anchor_.data());
         shape_.clear(tail);
       } else {
-        std::copy(tail_at(i), tail_at(i) + size, tail);
+        later = tail_at(i);
       }
       read(i - 1, tail_anchor_.data(), row_.data());
-      shape_.push(tail, row_.data(), series().weight[i - 1]);
+      shape_.push(later, row_.data(), series().weight[i - 1], tail);
     }
     shape_.clear(head_.data());
-    block_ = block;
+    block_end_ = begin + plan_.length;
   }
 
   double* tail_at(std::size_t i) {
@@ -319,104 +335,108 @@ class WindowWalk {
     estimate_.n_rows = static_cast<Index>(next_ - first_);
     estimate_.status = WindowStatus::too_few_rows;
     if (estimate_.n_rows < plan_.min_obs) return;
-    const bool solved = plan_.options.window == WindowKind::full ? false
-                        : plan_.options.window == WindowKind::rolling
-                            ? solve_rolling()
-                            : solve_aggregate(head_.data(), head_anchor_.data());
-    if (!solved) solve_rows();
+    const bool solved = plan_.options.window != WindowKind::full && solve_aggregate();
+    if (!solved) solve_rows(first_, next_);
   }
 
-  bool solve_rolling() {
-    if (first_ >= tail_end_) return solve_aggregate(head_.data(), head_anchor_.data());
-    double* tail = tail_at(first_);
-    if (next_ == tail_end_) return solve_aggregate(tail, tail_anchor_.data());
-    for (int i = 0; i < shape_.n_variables(); ++i)
-      shift_.data()[i] = head_anchor_.data()[i] - tail_anchor_.data()[i];
-    shape_.merge(tail, head_.data(), shift_.data(), window_.data());
-    return solve_aggregate(window_.data(), tail_anchor_.data());
+  // Means and products of the rows in the window, to mean(i, value), product(position, value).
+  template <typename MeanTo, typename ProductTo>
+  void gather(const MeanTo& mean, const ProductTo& product) {
+    const bool has_tail = plan_.options.window == WindowKind::rolling && first_ < tail_end_;
+    const bool has_head = !has_tail || next_ > tail_end_;
+    if (has_tail && has_head) {
+      const double* anchor = tail_anchor_.data();
+      for (int i = 0; i < shape_.n_variables(); ++i)
+        shift_.data()[i] = head_anchor_.data()[i] - anchor[i];
+      shape_.merge(
+          tail_at(first_), head_.data(), shift_.data(),
+          [&](int i, double value) LAMBDABAR_INLINE { mean(i, value + anchor[i]); }, product);
+      return;
+    }
+    const double* from = has_head ? head_.data() : tail_at(first_);
+    const double* anchor = has_head ? head_anchor_.data() : tail_anchor_.data();
+    for (int i = 0; i < shape_.n_variables(); ++i) mean(i, shape_.mean(from)[i] + anchor[i]);
+    for (int i = 0; i < packed_size(shape_.n_variables()); ++i)
+      product(i, shape_.products(from)[i]);
   }
 
-  // S_ff = L L', u = L^-1 S_fy, b = L'^-1 u, rss = S_yy - u'u. False when a pivot is too
-  // small against what it came from.
-  bool solve_aggregate(const double* aggregate, const double* anchor) {
+  bool solve_aggregate() {
+    gather([&](int i, double value) { mean_.data()[i] = value; },
+           [&](int at, double value) { products_.data()[at] = value; });
+    solver_.solve(products_.data(), mean_.data());
+    if (!solver_.trusted()) return false;
     const int K = shape_.n_factors();
-    const double* S = shape_.products(aggregate);
-    double *L = triangle_.data(), *u = row_.data();
-    for (int i = 0; i < K; ++i) {
-      for (int j = 0; j <= i; ++j) {
-        double value = S[packed_at(i, j)];
-        for (int l = 0; l < j; ++l) value -= L[packed_at(i, l)] * L[packed_at(j, l)];
-        if (j < i) {
-          L[packed_at(i, j)] = value * L[packed_at(j, j)];
-        } else {
-          if (!(value > kWindowPivot * S[packed_at(i, i)])) return false;
-          L[packed_at(i, i)] = 1.0 / std::sqrt(value);  // the diagonal is kept inverted
-        }
-      }
-    }
-    const double tss = S[packed_at(K, K)];
-    double rss = tss;
-    for (int i = 0; i < K; ++i) {
-      double value = S[packed_at(K, i)];
-      for (int l = 0; l < i; ++l) value -= L[packed_at(i, l)] * u[l];
-      u[i] = value * L[packed_at(i, i)];
-      rss -= u[i] * u[i];
-    }
-    if (!(rss > kWindowPivot * tss) && tss > 0.0) return false;
-    double* b = estimate_.beta.data();
-    for (int i = K - 1; i >= 0; --i) {
-      double value = u[i];
-      for (int l = i + 1; l < K; ++l) value -= L[packed_at(l, i)] * b[l];
-      b[i] = value * L[packed_at(i, i)];
-    }
-    invert_triangle();
-    const double* mean = shape_.mean(aggregate);
-    double alpha = mean[K] + anchor[K];
-    for (int k = 0; k < K; ++k) alpha -= b[k] * (mean[k] + anchor[k]);
     estimate_.status = WindowStatus::estimated;
-    estimate_.alpha = alpha;
-    estimate_.r_squared = tss > 0.0 ? 1.0 - rss / tss : kNaN;
+    for (int k = 0; k < K; ++k) estimate_.beta[static_cast<std::size_t>(k)] = solver_.beta(k);
+    estimate_.alpha = solver_.alpha();
+    estimate_.r_squared = solver_.r_squared();
     if (plan_.options.window == WindowKind::decay) {
-      fill_decayed_covariance(aggregate, rss);
-    } else {
-      estimate_.resid_var = rss / static_cast<double>(estimate_.n_rows - 1 - K);
-      fill_covariance(estimate_.resid_var);
+      fill_decayed_covariance(head_.data());
+      return true;
     }
+    estimate_.resid_var = solver_.rss() / static_cast<double>(estimate_.n_rows - 1 - K);
+    double* V = estimate_.covariance.data();
+    for (int j = 0; j < K; ++j)
+      for (int i = j; i < K; ++i) *V++ = estimate_.resid_var * solver_.inverse_at(i, j);
     return true;
   }
 
-  // L^-1, lower triangle by rows.
-  void invert_triangle() {
-    const int K = shape_.n_factors();
-    const double* L = triangle_.data();
-    double* M = inverse_.data();
-    for (int i = 0; i < K; ++i) {
-      M[packed_at(i, i)] = L[packed_at(i, i)];
-      for (int j = 0; j < i; ++j) {
-        double value = 0;
-        for (int l = j; l < i; ++l) value -= L[packed_at(i, l)] * M[packed_at(l, j)];
-        M[packed_at(i, j)] = value * L[packed_at(i, i)];
-      }
+  // Puts the window into a lane; the lanes are solved when all are taken.
+  void stage(Index row) {
+    estimate_.n_rows = static_cast<Index>(next_ - first_);
+    if (estimate_.n_rows < plan_.min_obs) {
+      estimate_.status = WindowStatus::too_few_rows;
+      store(row);
+      return;
     }
+    const int lane = staged_++;
+    gather(
+        [&](int i, double value) LAMBDABAR_INLINE { lane_means_.data()[i](lane) = value; },
+        [&](int at, double value) LAMBDABAR_INLINE { lane_products_.data()[at](lane) = value; });
+    lane_n_(lane) = static_cast<double>(estimate_.n_rows);
+    waiting_[static_cast<std::size_t>(lane)] = {row, first_, next_};
+    if (staged_ == kWindowLanes) solve_staged();
   }
 
-  // (S^-1)_ij = sum_l M_li M_lj.
-  double inverse_at(int i, int j) const {
-    const double* M = inverse_.data();
-    double value = 0;
-    for (int l = std::max(i, j); l < shape_.n_factors(); ++l)
-      value += M[packed_at(l, i)] * M[packed_at(l, j)];
-    return value;
+  void solve_staged() {
+    lane_solver_.solve(lane_products_.data(), lane_means_.data());
+    const int K = shape_.n_factors();
+    const WindowLanes s2 = lane_solver_.rss() / (lane_n_ - (1.0 + K));
+    for (int k = 0; k < K; ++k) {
+      put(out_.beta, k, lane_solver_.beta(k));
+      if (out_.std_error)
+        put(out_.std_error, k, (s2 * lane_solver_.inverse_at(k, k)).sqrt());
+    }
+    if (out_.covariance)
+      for (int j = 0, at = 0; j < K; ++j)
+        for (int i = j; i < K; ++i, ++at)
+          put(out_.covariance, at, s2 * lane_solver_.inverse_at(i, j));
+    put(out_.alpha, 0, lane_solver_.alpha());
+    put(out_.resid_var, 0, s2);
+    put(out_.r_squared, 0, lane_solver_.r_squared());
+    for (int lane = 0; lane < staged_; ++lane) {
+      const Waiting& window = waiting_[static_cast<std::size_t>(lane)];
+      const auto n = static_cast<int>(window.next - window.first);
+      if (out_.n_obs) out_.n_obs[window.row] = n;
+      if (out_.status) out_.status[window.row] = static_cast<int>(WindowStatus::estimated);
+      if (lane_solver_.trusted()(lane)) continue;
+      estimate_.n_rows = n;
+      solve_rows(window.first, window.next);
+      store(window.row);
+    }
+    staged_ = 0;
   }
 
-  void fill_covariance(double s2) {
-    double* V = estimate_.covariance.data();
-    for (int j = 0; j < shape_.n_factors(); ++j)
-      for (int i = j; i < shape_.n_factors(); ++i) *V++ = s2 * inverse_at(i, j);
+  // One value for each staged window, into a column of the result.
+  void put(double* result, int column, const WindowLanes& values) const {
+    if (!result) return;
+    double* to = result + column * n_out_;
+    for (int lane = 0; lane < staged_; ++lane)
+      to[waiting_[static_cast<std::size_t>(lane)].row] = values(lane);
   }
 
   // C = S2 + W2 (m2 - m)(m2 - m)': the squared weights have a mean of their own.
-  void fill_decayed_covariance(const double* aggregate, double rss) {
+  void fill_decayed_covariance(const double* aggregate) {
     const int K = shape_.n_factors();
     const double *m = shape_.mean(aggregate), *m2 = shape_.mean(squares_.data());
     const double* S2 = shape_.products(squares_.data());
@@ -425,30 +445,30 @@ class WindowWalk {
     for (int i = 0; i < K; ++i) {
       for (int j = 0; j <= i; ++j) {
         C(i, j) = C(j, i) = S2[packed_at(i, j)] + w2 * (m2[i] - m[i]) * (m2[j] - m[j]);
-        inverse(i, j) = inverse(j, i) = inverse_at(i, j);
+        inverse(i, j) = inverse(j, i) = solver_.inverse_at(i, j);
       }
     }
     const Matrix half = inverse * C;
     estimate_.resid_var =
-        rss / (wanted_ - w2 / shape_.weight(aggregate) - half.trace());
+        solver_.rss() / (wanted_ - w2 / shape_.weight(aggregate) - half.trace());
     const Matrix V = estimate_.resid_var * half * inverse;
     double* packed = estimate_.covariance.data();
     for (int j = 0; j < K; ++j)
       for (int i = j; i < K; ++i) *packed++ = V(i, j);
   }
 
-  void solve_rows() {
-    const Index n = estimate_.n_rows, K = shape_.n_factors();
+  void solve_rows(std::size_t first, std::size_t next) {
+    const Index n = static_cast<Index>(next - first), K = shape_.n_factors();
     WindowRows rows{Matrix(n, K), Vector(n), Vector(n), Vector::Ones(n), false};
     rows.decays = plan_.options.window == WindowKind::decay;
     for (Index r = 0; r < n; ++r) {
-      const std::size_t i = first_ + static_cast<std::size_t>(r);
+      const std::size_t i = first + static_cast<std::size_t>(r);
       rows.factors.row(r) =
           Eigen::Map<const Eigen::RowVectorXd>(plan_.factors_at(series().slot[i]), K);
       rows.y(r) = series().y[i];
       if (rows.decays)
         rows.wanted(r) =
-            std::pow(plan_.decay, series().slot[next_ - 1] - series().slot[i]);
+            std::pow(plan_.decay, series().slot[next - 1] - series().slot[i]);
       rows.weight(r) = series().weight[i] * rows.wanted(r);
     }
     fit_window(rows, estimate_);
@@ -502,19 +522,35 @@ class WindowWalk {
   const ExposureColumns& out_;
   const Index n_out_;
   const Aggregates<Fixed> shape_;
+  static constexpr int kVariables = Fixed + 1, kProducts = packed_size(Fixed + 1);
   template <int Size>
-  using Room = Scratch<Fixed, Size>;
-  static constexpr int kVariables = Fixed + 1, kTriangle = packed_size(Fixed);
+  using Room = Scratch<double, Fixed, Size>;
   Room<kVariables> row_, head_anchor_, tail_anchor_, shift_;
-  Room<Aggregates<Fixed>::kFixedSize> head_, squares_, window_;
-  Room<kTriangle> triangle_, inverse_;
+  Room<Aggregates<Fixed>::kFixedSize> head_, squares_;
+  Room<kVariables> mean_;
+  Room<kProducts> products_;
+  WindowSolver<double, Fixed> solver_;
+
+  // Windows that wait to be solved side by side: rows first .. next - 1 of the series.
+  struct Waiting {
+    Index row;
+    std::size_t first, next;
+  };
+  bool in_lanes_ = false;
+  int staged_ = 0;
+  std::array<Waiting, kWindowLanes> waiting_;
+  Scratch<WindowLanes, Fixed, kProducts> lane_products_;
+  Scratch<WindowLanes, Fixed, kVariables> lane_means_;
+  WindowLanes lane_n_;
+  WindowSolver<WindowLanes, Fixed> lane_solver_;
+
   std::vector<double> tails_;
   WindowEstimate estimate_;
 
   const AssetSeries* series_ = nullptr;
   // Rows first_ .. next_ - 1 are in the window; those of tails_ end at tail_end_ - 1.
   std::size_t next_ = 0, first_ = 0, tail_begin_ = 0, tail_end_ = 0;
-  int block_ = -1, last_end_ = -1;
+  int block_end_ = 0, last_end_ = -1;
   bool answered_ = false;
   double wanted_ = 0;
 };
@@ -561,6 +597,7 @@ void walk_assets(const ExposureData& data,
         const Index query = asked.row(i);
         walk.answer(queries.last_slot[static_cast<std::size_t>(queries.time[query])], query);
       }
+      walk.finish();
     }
   });
 }
