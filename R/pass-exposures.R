@@ -199,9 +199,6 @@ answer_exposures <- function(first_pass, asked, wanted, half = NULL, call = rlan
     wanted
   )
   answer <- row_result(answer, panel, first_pass$weights, call)
-  for (name in c("alpha", "resid_var", "r_squared")) {
-    if (!is.null(answer[[name]])) dim(answer[[name]]) <- NULL
-  }
   if (first_pass$shrink == "none") {
     return(answer)
   }

@@ -74,18 +74,29 @@ SEXP cpp_exposures(const Rcpp::List& data,
     lambdabar::ExposureColumns columns;
     columns.missing = NA_REAL;
     Rcpp::List out;
-    auto reals = [&](const char* name, int width) -> double* {
-      if (std::find(wanted.begin(), wanted.end(), name) == wanted.end()) return nullptr;
-      Rcpp::NumericMatrix values(Rcpp::no_init(n, width));
+    auto reals = [&](const char* name, R_xlen_t size) -> Rcpp::NumericVector {
+      Rcpp::NumericVector values = Rcpp::no_init(size);
       out[name] = values;
+      return values;
+    };
+    auto is_wanted = [&](const char* name) {
+      return std::find(wanted.begin(), wanted.end(), name) != wanted.end();
+    };
+    auto matrix = [&](const char* name, int width) -> double* {
+      if (!is_wanted(name)) return nullptr;
+      Rcpp::NumericVector values = reals(name, static_cast<R_xlen_t>(n) * width);
+      values.attr("dim") = Rcpp::Dimension(n, width);
       return values.begin();
     };
-    columns.beta = reals("beta", K);
-    columns.std_error = reals("std_error", K);
-    columns.covariance = reals("covariance", K * (K + 1) / 2);
-    columns.alpha = reals("alpha", 1);
-    columns.resid_var = reals("resid_var", 1);
-    columns.r_squared = reals("r_squared", 1);
+    auto vector = [&](const char* name) -> double* {
+      return is_wanted(name) ? reals(name, n).begin() : nullptr;
+    };
+    columns.beta = matrix("beta", K);
+    columns.std_error = matrix("std_error", K);
+    columns.covariance = matrix("covariance", K * (K + 1) / 2);
+    columns.alpha = vector("alpha");
+    columns.resid_var = vector("resid_var");
+    columns.r_squared = vector("r_squared");
     Rcpp::IntegerVector n_obs = Rcpp::no_init(n), status = Rcpp::no_init(n);
     columns.n_obs = n_obs.begin();
     columns.status = status.begin();

@@ -3,8 +3,8 @@
 
 bench_file <- sub("^--file=", "", grep("^--file=", commandArgs(), value = TRUE))
 
-# Results must lie on fresh pages in every round, as they would for a user: the allocator is
-# told, at its start, to return large blocks to the system. (glibc; elsewhere it has no effect.)
+# Our results must lie on fresh pages in every round, as the limit does: the allocator is told,
+# at its start, to return large blocks to the system. (glibc; elsewhere it has no effect.)
 if (!nzchar(Sys.getenv("MALLOC_MMAP_THRESHOLD_"))) {
   Sys.setenv(MALLOC_MMAP_THRESHOLD_ = 2^20)
   rscript <- file.path(R.home("bin"), "Rscript")
@@ -31,14 +31,10 @@ simulate_returns <- function(n_rows, n_periods, n_factors, seed = 20261201L) {
 
 factor_formula <- function(n_factors) reformulate(paste0("f", seq_len(n_factors)), "ret")
 
-# Fresh pages in the shapes of the result (betas and errors, intercept, residual variance, R2,
-# count, status), each touched once and all held together: what any such answer must pay.
-touch_result <- function(n_rows, n_factors) {
-  function() {
-    reals <- lapply(c(n_factors, n_factors, 1L, 1L, 1L), function(width) matrix(0, n_rows, width))
-    codes <- lapply(1:2, function(column) integer(n_rows))
-    length(reals) + length(codes)
-  }
+# Betas and errors, intercept, residual variance, R2 (doubles), count, status (integers): what
+# any such answer must write.
+write_result <- function(n_rows, n_factors) {
+  function() write_fresh(n_rows * (8 * (2 * n_factors + 3) + 4 * 2))
 }
 
 # What a general library does for the same: rolling sums of all columns and products, asset by
@@ -65,7 +61,7 @@ bench_windows <- function(n_rows, n_periods, length, n_factors) {
   data.table::setDTthreads(1L)
   tasks <- list(
     sums = rolling_sums(data, length, n_factors),
-    write = touch_result(nrow(data), n_factors),
+    write = write_result(nrow(data), n_factors),
     one = with_threads(1L, function() fit()), two = with_threads(2L, function() fit()),
     long = with_threads(1L, function() fit(long))
   )
@@ -74,7 +70,7 @@ bench_windows <- function(n_rows, n_periods, length, n_factors) {
   print_title(format(nrow(data), big.mark = ","), " rows, ", n_periods, " periods, window ", length, ", K = ", n_factors)
   print_heads()
   print_row("the read alone", spent, "read")
-  print_row("fresh pages of the result", spent, "write")
+  print_row("the result written to fresh pages", spent, "write")
   for (task in c("one", "two")) {
     share <- times(median(spent["cpu", task, ] / limit), "x read+write")
     print_row(paste0("exposures(), ", threads_label(if (task == "one") 1L else 2L)), spent, task, share, if (task == "one") "4.5" else "")

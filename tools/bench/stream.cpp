@@ -1,6 +1,8 @@
-// The limit that a machine sets: reading columns once, in order, and doing next to
-// nothing.
+// The limits that a machine sets: reading columns once, in order, and doing next to nothing;
+// writing a result of some size once, on fresh pages.
 #include <Rcpp.h>
+
+#include <sys/mman.h>
 
 #include <algorithm>
 #include <chrono>
@@ -51,4 +53,17 @@ Rcpp::NumericVector read_columns(const Rcpp::List& columns, int repeats) {
   }
   return Rcpp::NumericVector::create(
       Rcpp::_["cpu"] = cpu, Rcpp::_["wall"] = wall, Rcpp::_["sum"] = sum);
+}
+
+// Maps so many bytes of fresh memory, writes all of them once and lets them go.
+// [[Rcpp::export(rng = false)]]
+double write_fresh(double bytes) {
+  const auto size = static_cast<std::size_t>(bytes);
+  void* memory = mmap(nullptr, size, PROT_READ | PROT_WRITE, MAP_PRIVATE | MAP_ANONYMOUS, -1, 0);
+  if (memory == MAP_FAILED) Rcpp::stop("no memory for %.0f bytes", bytes);
+  auto* values = static_cast<volatile double*>(memory);
+  for (std::size_t i = 0; i < size / sizeof(double); ++i) values[i] = 1.0;
+  const double last = values[size / sizeof(double) - 1];
+  munmap(memory, size);
+  return last;
 }
