@@ -61,6 +61,26 @@ cpp_cell_means <- function(y, period, n_periods, cell, n_cells) {
     .Call(`_lambdabar_cpp_cell_means`, y, period, n_periods, cell, n_cells)
 }
 
+cpp_weighted_chisq <- function(weights, statistic) {
+    .Call(`_lambdabar_cpp_weighted_chisq`, weights, statistic)
+}
+
+cpp_pricing_r2 <- function(input, gls, series, slot) {
+    .Call(`_lambdabar_cpp_pricing_r2`, input, gls, series, slot)
+}
+
+cpp_joint_zero <- function(value, rows, series, slot) {
+    .Call(`_lambdabar_cpp_joint_zero`, value, rows, series, slot)
+}
+
+cpp_discount_factor <- function(input, gross, series, slot) {
+    .Call(`_lambdabar_cpp_discount_factor`, input, gross, series, slot)
+}
+
+cpp_efficient_moments <- function(input, series, slot) {
+    .Call(`_lambdabar_cpp_efficient_moments`, input, series, slot)
+}
+
 cpp_encode <- function(x) {
     .Call(`_lambdabar_cpp_encode`, x)
 }

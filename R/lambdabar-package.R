@@ -31,6 +31,7 @@
 #' @useDynLib lambdabar, .registration = TRUE
 #' @importFrom Rcpp evalCpp
 #' @importFrom generics tidy glance augment
+#' @importFrom rlang .data
 #' @importFrom stats coef vcov confint nobs residuals fitted
 #' @keywords internal
 "_PACKAGE"

@@ -16,9 +16,16 @@
 #'   * `"grs_chisq"`, `"grs_lr"`: the chi-square and likelihood-ratio forms of `"grs"`, which
 #'     reject too often in samples of a few years;
 #'   * `"grs_moments"`: the intercepts with heteroskedasticity- (and autocorrelation-)
-#'     consistent covariance by `series`.
-#' @param series `err_iid()` or `err_hac()`: the sum over periods in `"averaged"`, `"moments"`
-#'   and `"grs_moments"`.
+#'     consistent covariance by `series`;
+#'   * `"hj_excess"`, `"hj_gross"`: T times the squared Hansen-Jagannathan distance against its
+#'     weighted sum of chi-squares (Jagannathan and Wang 1996), `num.df` the number of weights.
+#'     The first takes returns as excess returns and has no constant, whatever the fit has; the
+#'     second takes gross returns, such as `I(1 + ret) ~ mkt`. `note` has the distance and its
+#'     standard error; see [discount_factor()];
+#'   * `"efficient"`: the J statistic of betas, premia and factor means estimated together with
+#'     the efficient weights (Hansen 1982). It needs more periods than the N (K + 1) + K moments.
+#' @param series `err_iid()` or `err_hac()`: the sum over periods in `"averaged"`, `"moments"`,
+#'   `"grs_moments"`, `"efficient"` and the distances.
 #'
 #' @details All moments have divisor T, whatever `series` says of T/(T-1): small-sample
 #'   corrections are F forms, not multipliers. The quadratic forms use an orthonormal
@@ -34,7 +41,9 @@
 #'
 #' @references Gibbons, Ross and Shanken (1989), Econometrica 57, 1121-1152. Shanken (1985),
 #' Journal of Financial Economics 14, 327-348; (1992), Review of Financial Studies 5, 1-33.
-#' Hansen (1982), Econometrica 50, 1029-1054.
+#' Hansen (1982), Econometrica 50, 1029-1054. Hansen and Jagannathan (1997), Journal of Finance
+#' 52, 557-590. Jagannathan and Wang (1996), Journal of Finance 51, 3-53. Kan and Robotti (2008),
+#' Journal of Empirical Finance 15, 816-838.
 #'
 #' @examples
 #' set.seed(1)
@@ -51,27 +60,20 @@ alpha_test <- function(fit, kind = c("averaged", "corrected", "f_approx", "grs",
   if (!is.character(kind) || !length(kind) || length(unknown)) {
     abort_input("{.arg kind} must be some of {.val {alpha_kinds()}}.")
   }
-  result <- two_pass_result(
-    cpp_alpha_tests(fit$input, kind, series_options(series), fit$slot_estimated - 1L), fit$panel, fit$terms
-  )
-  if (all(is.na(result$statistic))) {
-    notes <- vapply(seq_along(kind), function(i) paste0(kind[i], ": ", refusal_note(result, i)), "")
+  rows <- alpha_rows(fit, kind, series)
+  if (all(is.na(rows$statistic))) {
+    notes <- paste0(kind, ": ", rows$note)
     abort_sample(c("None of the tests can be computed on this sample.", stats::setNames(notes, rep("x", length(notes)))))
   }
-  chi <- is.na(result$df2)
-  p <- ifelse(
-    chi, stats::pchisq(result$statistic, result$df1, lower.tail = FALSE),
-    stats::pf(result$statistic, result$df1, result$df2, lower.tail = FALSE)
-  )
   new_test(
-    test = kind, statistic = result$statistic, num.df = result$df1, den.df = ifelse(chi, Inf, result$df2),
-    p.value = p, note = vapply(seq_along(kind), function(i) refusal_note(result, i), ""),
+    test = kind, statistic = rows$statistic, num.df = rows$num.df, den.df = rows$den.df,
+    p.value = rows$p.value, note = rows$note,
     title = paste0(
       "Are all pricing errors zero? ", count_of(length(fit$alpha), "asset"), ", ",
       count_of(length(fit$kept), period_noun(fit$panel))
     ),
-    subtitle = if (any(kind %in% c("averaged", "moments", "grs_moments"))) paste0("Sum over periods: ", format(series)),
-    reading = alpha_reading(kind, p)
+    subtitle = if (any(kind %in% c("averaged", "moments", "grs_moments", "efficient", "hj_excess", "hj_gross"))) paste0("Sum over periods: ", format(series)),
+    reading = alpha_reading(kind, rows$p.value)
   )
 }
 
@@ -96,15 +98,105 @@ check_complete_fit <- function(fit, what, advice = NULL, call = rlang::caller_en
   )
 }
 
-alpha_kinds <- function() {
+alpha_kinds <- function() c(quadratic_kinds(), "hj_excess", "hj_gross", "efficient")
+
+# Those that the core computes together, from one estimate.
+quadratic_kinds <- function() {
   c("averaged", "corrected", "f_approx", "grs", "moments", "grs_chisq", "grs_lr", "grs_moments")
+}
+
+alpha_rows <- function(fit, kind, series, call = rlang::caller_env()) {
+  together <- intersect(kind, quadratic_kinds())
+  rows <- list()
+  if (length(together)) {
+    result <- two_pass_result(
+      cpp_alpha_tests(fit$input, together, series_options(series), fit$slot_estimated - 1L), fit$panel, fit$terms, call
+    )
+    chi <- is.na(result$df2)
+    rows <- lapply(stats::setNames(seq_along(together), together), function(i) {
+      x <- result$statistic[i]
+      list(
+        statistic = x, num.df = result$df1[i], den.df = if (chi[i]) Inf else result$df2[i],
+        p.value = if (chi[i]) stats::pchisq(x, result$df1[i], lower.tail = FALSE) else stats::pf(x, result$df1[i], result$df2[i], lower.tail = FALSE),
+        note = refusal_note(result, i)
+      )
+    })
+  }
+  for (name in setdiff(kind, together)) {
+    rows[[name]] <- if (name == "efficient") efficient_row(fit, series, call) else distance_row(fit, name, series, call)
+  }
+  rows <- rows[kind]
+  pick <- function(field, type) unname(vapply(rows, `[[`, type, field))
+  list(
+    statistic = pick("statistic", 1), num.df = pick("num.df", 1), den.df = pick("den.df", 1),
+    p.value = pick("p.value", 1), note = pick("note", "")
+  )
+}
+
+efficient_row <- function(fit, series, call) {
+  result <- two_pass_result(
+    cpp_efficient_moments(fit$input, series_options(series), fit$slot_estimated - 1L), fit$panel, fit$terms, call
+  )
+  df <- length(fit$alpha) - length(fit$terms)
+  n_moments <- length(fit$alpha) * (ncol(fit$first$beta) + 1) + ncol(fit$first$beta)
+  list(
+    statistic = result$J, num.df = df, den.df = Inf, p.value = stats::pchisq(result$J, df, lower.tail = FALSE),
+    note = switch(result$refusal + 1L,
+      paste(count_of(n_moments, "moment"), "over", format_count(length(fit$kept)), "periods"),
+      just_identified_note,
+      paste0("too few periods: ", length(fit$kept), " for ", count_of(n_moments, "moment")),
+      "the covariance of the moments is singular"
+    )
+  )
+}
+
+just_identified_note <- "as many premia as assets: there is no pricing error to test"
+
+distance_row <- function(fit, kind, series, call) {
+  empty <- list(statistic = NA_real_, num.df = NA_real_, den.df = Inf, p.value = NA_real_)
+  gross <- kind == "hj_gross"
+  if (gross) check_gross(fit, call)
+  result <- cpp_discount_factor(fit$input, gross, series_options(series), fit$slot_estimated - 1L)
+  if (inherits(result, "lb_core_error")) {
+    return(c(empty, note = tolower_first(result$message)))
+  }
+  if (!length(result$right$weights)) {
+    return(c(empty, note = "as many coefficients as assets: the distance is zero"))
+  }
+  list(
+    statistic = result$right$statistic, num.df = length(result$right$weights), den.df = Inf,
+    p.value = result$right$p,
+    note = paste0(
+      "distance ", formatC(sqrt(result$distance2), digits = 3, format = "f"), " (error ",
+      formatC(distance_error(result, fit, series), digits = 3, format = "f"), "), weighted chi-squares"
+    )
+  )
+}
+
+# Standard error of the distance, for one that is not zero.
+distance_error <- function(result, fit, series) {
+  variance <- core_result(cpp_sum_series(
+    cbind(result$distance_rows), fit$slot_estimated - 1L, 1, series_options(series)
+  ))$S[1L]
+  sqrt(variance) / (2 * sqrt(result$distance2))
+}
+
+check_gross <- function(fit, call) {
+  middle <- stats::median(fit$mean_return)
+  smallest <- min(fit$input$returns)
+  if (smallest <= 0 || middle < 0.5 || middle > 2) {
+    abort_input(c(
+      "Gross returns are positive and about one; the left side goes down to {signif(smallest, 3)}, with means around {signif(middle, 3)}.",
+      i = "Estimate with {.code I(1 + ret) ~ ...}, or {.code I(1 + ret / 100) ~ ...} for percent."
+    ), call = call)
+  }
 }
 
 refusal_note <- function(result, i) {
   facts <- result$facts[[i]]
   switch(result$refusal[i],
     none = if (isTRUE(result$capped[i])) "lags capped by the length of the series" else "",
-    just_identified = "as many premia as assets: there is no pricing error to test",
+    just_identified = just_identified_note,
     too_few_periods = paste0(
       "too few periods: ", facts$n_periods, " for ", facts$n_assets, " assets and ", count_of(facts$n_factors, "factor")
     ),

@@ -222,6 +222,68 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_weighted_chisq
+double cpp_weighted_chisq(const Eigen::VectorXd& weights, double statistic);
+RcppExport SEXP _lambdabar_cpp_weighted_chisq(SEXP weightsSEXP, SEXP statisticSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type weights(weightsSEXP);
+    Rcpp::traits::input_parameter< double >::type statistic(statisticSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_weighted_chisq(weights, statistic));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_pricing_r2
+SEXP cpp_pricing_r2(const Rcpp::List& input, bool gls, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_pricing_r2(SEXP inputSEXP, SEXP glsSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< bool >::type gls(glsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_pricing_r2(input, gls, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_joint_zero
+SEXP cpp_joint_zero(const Eigen::VectorXd& value, const Eigen::MatrixXd& rows, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_joint_zero(SEXP valueSEXP, SEXP rowsSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type value(valueSEXP);
+    Rcpp::traits::input_parameter< const Eigen::MatrixXd& >::type rows(rowsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_joint_zero(value, rows, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_discount_factor
+SEXP cpp_discount_factor(const Rcpp::List& input, bool gross, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_discount_factor(SEXP inputSEXP, SEXP grossSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< bool >::type gross(grossSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_discount_factor(input, gross, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_efficient_moments
+SEXP cpp_efficient_moments(const Rcpp::List& input, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_efficient_moments(SEXP inputSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_efficient_moments(input, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_encode
 Rcpp::List cpp_encode(SEXP x);
 RcppExport SEXP _lambdabar_cpp_encode(SEXP xSEXP) {
@@ -429,6 +491,11 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_alpha_tests", (DL_FUNC) &_lambdabar_cpp_alpha_tests, 4},
     {"_lambdabar_cpp_refine_cells", (DL_FUNC) &_lambdabar_cpp_refine_cells, 5},
     {"_lambdabar_cpp_cell_means", (DL_FUNC) &_lambdabar_cpp_cell_means, 5},
+    {"_lambdabar_cpp_weighted_chisq", (DL_FUNC) &_lambdabar_cpp_weighted_chisq, 2},
+    {"_lambdabar_cpp_pricing_r2", (DL_FUNC) &_lambdabar_cpp_pricing_r2, 4},
+    {"_lambdabar_cpp_joint_zero", (DL_FUNC) &_lambdabar_cpp_joint_zero, 4},
+    {"_lambdabar_cpp_discount_factor", (DL_FUNC) &_lambdabar_cpp_discount_factor, 4},
+    {"_lambdabar_cpp_efficient_moments", (DL_FUNC) &_lambdabar_cpp_efficient_moments, 3},
     {"_lambdabar_cpp_encode", (DL_FUNC) &_lambdabar_cpp_encode, 1},
     {"_lambdabar_cpp_relabel", (DL_FUNC) &_lambdabar_cpp_relabel, 2},
     {"_lambdabar_cpp_missing_codes", (DL_FUNC) &_lambdabar_cpp_missing_codes, 2},

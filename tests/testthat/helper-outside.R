@@ -40,6 +40,24 @@ data_of <- local({
   }
 })
 
+# gmm::Finance: excess returns and factors, percent a day; stocks in the order of the file.
+finance_sample <- function(rows, n_stocks, n_factors) {
+  d <- data_of("Finance", "gmm")[seq_len(rows), ]
+  list(
+    returns = as.matrix(d[, seq_len(n_stocks)] - d$rf),
+    factors = cbind(mkt = d$rm - d$rf, smb = d$smb, hml = d$hml)[, seq_len(n_factors), drop = FALSE]
+  )
+}
+
+sample_panel <- function(sample) {
+  asset_panel(stack_returns(sample$returns, sample$factors, period = seq_len(nrow(sample$returns))), "asset", "period")
+}
+
+sample_fit <- function(sample, ...) {
+  model <- stats::reformulate(colnames(sample$factors), "ret")
+  price_factors(sample_panel(sample), model, ...)
+}
+
 # A complete panel of 8 assets whose cross-sections have exactly these slopes (T x P, the
 # constant first, P up to 4): regressors and noise are orthogonal columns of -1 and 1, so
 # that every product is a sum of few numbers.

@@ -9,24 +9,6 @@ finance_reference <- local({
   }
 })
 
-# Excess returns and factors, percent a day; stocks in the order of the file.
-finance_sample <- function(rows, n_stocks, n_factors) {
-  d <- data_of("Finance", "gmm")[seq_len(rows), ]
-  list(
-    returns = as.matrix(d[, seq_len(n_stocks)] - d$rf),
-    factors = cbind(mkt = d$rm - d$rf, smb = d$smb, hml = d$hml)[, seq_len(n_factors), drop = FALSE]
-  )
-}
-
-sample_panel <- function(sample) {
-  asset_panel(stack_returns(sample$returns, sample$factors, period = seq_len(nrow(sample$returns))), "asset", "period")
-}
-
-sample_fit <- function(sample, ...) {
-  model <- stats::reformulate(colnames(sample$factors), "ret")
-  price_factors(sample_panel(sample), model, ...)
-}
-
 # Assets of a fit stand in the order of their names, those of a sample in that of the file.
 in_file_order <- function(fit, sample) match(colnames(sample$returns), fit$panel$assets)
 
