@@ -141,3 +141,15 @@ cpp_response <- function(design, period, n_periods) {
     .Call(`_lambdabar_cpp_response`, design, period, n_periods)
 }
 
+cpp_rank_test <- function(input, rank, kind, series, slot, signs) {
+    .Call(`_lambdabar_cpp_rank_test`, input, rank, kind, series, slot, signs)
+}
+
+cpp_premium_sets <- function(input, critical, critical_one) {
+    .Call(`_lambdabar_cpp_premium_sets`, input, critical, critical_one)
+}
+
+cpp_premium_set_by_scan <- function(input, expected, critical, series, slot) {
+    .Call(`_lambdabar_cpp_premium_set_by_scan`, input, expected, critical, series, slot)
+}
+

@@ -19,6 +19,7 @@ print.lb_premia <- function(x, ...) {
     label_line("Premium", paste0("decimal a ", unit, ", for one unit", if (on_betas) " of beta", average_phrase(x))),
     label_line("Errors", paste0(x$covariance$phrase, "; t with ", format_df(x$covariance$df), " df")),
     if (is_moving(x)) beta_error_lines(x),
+    weak_factor_line(x),
     sample_lines(x, n_used, unit),
     if (!is.na(x$r_squared)) label_line("Fit", paste0("mean R2 of a cross-section ", format(x$r_squared, digits = 3)))
   )

@@ -474,6 +474,47 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_rank_test
+SEXP cpp_rank_test(const Rcpp::List& input, int rank, const std::string& kind, const Rcpp::List& series, const Rcpp::IntegerVector& slot, const Rcpp::NumericMatrix& signs);
+RcppExport SEXP _lambdabar_cpp_rank_test(SEXP inputSEXP, SEXP rankSEXP, SEXP kindSEXP, SEXP seriesSEXP, SEXP slotSEXP, SEXP signsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< int >::type rank(rankSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type kind(kindSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type signs(signsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_rank_test(input, rank, kind, series, slot, signs));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_premium_sets
+SEXP cpp_premium_sets(const Rcpp::List& input, double critical, double critical_one);
+RcppExport SEXP _lambdabar_cpp_premium_sets(SEXP inputSEXP, SEXP criticalSEXP, SEXP critical_oneSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< double >::type critical(criticalSEXP);
+    Rcpp::traits::input_parameter< double >::type critical_one(critical_oneSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_premium_sets(input, critical, critical_one));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_premium_set_by_scan
+SEXP cpp_premium_set_by_scan(const Rcpp::List& input, bool expected, double critical, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_premium_set_by_scan(SEXP inputSEXP, SEXP expectedSEXP, SEXP criticalSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type input(inputSEXP);
+    Rcpp::traits::input_parameter< bool >::type expected(expectedSEXP);
+    Rcpp::traits::input_parameter< double >::type critical(criticalSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_premium_set_by_scan(input, expected, critical, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
 
 static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_corrected_sections", (DL_FUNC) &_lambdabar_cpp_corrected_sections, 7},
@@ -511,6 +552,9 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_usage", (DL_FUNC) &_lambdabar_cpp_usage, 6},
     {"_lambdabar_cpp_linear_predictor", (DL_FUNC) &_lambdabar_cpp_linear_predictor, 4},
     {"_lambdabar_cpp_response", (DL_FUNC) &_lambdabar_cpp_response, 3},
+    {"_lambdabar_cpp_rank_test", (DL_FUNC) &_lambdabar_cpp_rank_test, 6},
+    {"_lambdabar_cpp_premium_sets", (DL_FUNC) &_lambdabar_cpp_premium_sets, 3},
+    {"_lambdabar_cpp_premium_set_by_scan", (DL_FUNC) &_lambdabar_cpp_premium_set_by_scan, 5},
     {NULL, NULL, 0}
 };
 

@@ -204,7 +204,7 @@ test_that("gross returns that are none are refused, distances of small samples s
   fit <- price_factors(priced_panel(T = 10, N = 12), ret ~ mkt)
   expect_error(discount_factor(fit, "gross"), class = "lambdabar_error_input")
   expect_error(discount_factor(fit), class = "lambdabar_error_sample")
-  rows <- alpha_test(price_factors(priced_panel(T = 20, N = 8), ret ~ mkt), c("grs", "efficient", "hj_excess"))
+  rows <- alpha_test(price_factors(priced_panel(T = 16, N = 8), ret ~ mkt), c("grs", "efficient", "hj_excess"))
   expect_true(is.na(rows$statistic[2]) && grepl("too few periods", rows$note[2]))
   expect_false(anyNA(rows$p.value[c(1, 3)]))
   expect_error(alpha_test(fit, "hj_excess"), class = "lambdabar_error_sample")
