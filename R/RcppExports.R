@@ -141,6 +141,22 @@ cpp_response <- function(design, period, n_periods) {
     .Call(`_lambdabar_cpp_response`, design, period, n_periods)
 }
 
+cpp_time_sum <- function(rows, kind, size) {
+    .Call(`_lambdabar_cpp_time_sum`, rows, kind, size)
+}
+
+cpp_block_length <- function(series) {
+    .Call(`_lambdabar_cpp_block_length`, series)
+}
+
+cpp_resampled_t <- function(rows, index, length, threads) {
+    .Call(`_lambdabar_cpp_resampled_t`, rows, index, length, threads)
+}
+
+cpp_scan_breaks <- function(series, trim, options, slot) {
+    .Call(`_lambdabar_cpp_scan_breaks`, series, trim, options, slot)
+}
+
 cpp_rank_test <- function(input, rank, kind, series, slot, signs) {
     .Call(`_lambdabar_cpp_rank_test`, input, rank, kind, series, slot, signs)
 }

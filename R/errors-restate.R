@@ -85,6 +85,22 @@ error_covariance.lb_err_hac <- function(errors, fit, call = rlang::caller_env())
   series_covariance(errors, fit$rows, fit$slot, fit)
 }
 
+# Sums that are no kernel of lags: for averaged premia alone.
+resummed_premia <- function(errors, fit, call = rlang::caller_env()) {
+  if (inherits(fit, "lb_pooled")) {
+    refuse_errors(errors, fit, "Rows of a panel are no time series: use {.code err_cluster(\"asset\", \"period\")}.", call)
+  }
+  refuse_amplified(errors, fit, call)
+  series_covariance(errors, fit$rows, fit$slot, fit)
+}
+
+#' @exportS3Method
+error_covariance.lb_err_cosine <- resummed_premia
+#' @exportS3Method
+error_covariance.lb_err_groups <- resummed_premia
+#' @exportS3Method
+error_covariance.lb_err_block <- resummed_premia
+
 #' @exportS3Method
 error_covariance.lb_err_eiv <- function(errors, fit, call = rlang::caller_env()) {
   if (!is_two_pass(fit)) {
@@ -228,6 +244,9 @@ first_pass_covariance <- function(series, rows, fit) {
 
 # Averaged premia: rows over periods, summed by a kernel.
 series_covariance <- function(series, rows, slot, fit, small_sample = fit$small_sample) {
+  if (is_resummed(series)) {
+    return(resummed_covariance(series, rows, slot))
+  }
   sum <- core_result(cpp_sum_series(rows, slot - 1L, fit$bandwidth_weights, series_options(series)))
   vcov <- sum$S
   if (series$adjust) {
@@ -243,7 +262,10 @@ series_covariance <- function(series, rows, slot, fit, small_sample = fit$small_
   vcov <- blank_nonpositive(vcov, fit$terms)
   list(
     vcov = vcov, df = length(fit$slot) - 1, lags = sum$lags, bandwidth = sum$bandwidth,
-    adjust = series$adjust, phrase = series_phrase(series, sum)
+    adjust = series$adjust, phrase = series_phrase(series, sum),
+    reference = if (identical(series$critical, "fixed_b") && sum$bandwidth > 0) {
+      list(kind = "fixed_b", b = min(1, sum$bandwidth / nrow(rows)))
+    }
   )
 }
 

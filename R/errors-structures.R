@@ -7,6 +7,10 @@
 #' | --- | --- | --- |
 #' | `err_iid()` | averaged premia; pooled | independent periods; independent rows of equal variance |
 #' | `err_hac()` | averaged premia | autocorrelation and heteroskedasticity over periods |
+#' | `err_cosine()` | averaged premia | the same, with a t distribution that knows how few pieces of information there are |
+#' | `err_groups()` | averaged premia | any dependence inside a few long runs of periods |
+#' | `err_block()` | averaged premia | weak dependence, by resampling blocks of periods |
+#' | `err_overlap()` | averaged premia | returns over several periods that overlap |
 #' | `err_eiv()` | premia on estimated betas | as its `series`, and the error of the betas |
 #' | `err_moments()` | premia on estimated betas | both passes stacked as moments, any autocorrelation of all of them |
 #' | `err_misspec()` | premia on estimated betas | as robust `err_eiv()`, and a model that does not price the assets |
@@ -22,6 +26,7 @@
 #'     divide by lags + 1, `"truncated"` gives lags 1 to `lags` full weight, `"qs"` divides by
 #'     `lags` itself (any positive number) and weighs all lags;
 #'   * `"rule"`: \eqn{\lfloor 4 (T/100)^{2/9} \rfloor}{floor(4 (T/100)^(2/9))};
+#'   * `"root"`: \eqn{\lceil 1.3 \sqrt T \rceil - 1}{ceiling(1.3 sqrt(T)) - 1}, for fixed-b critical values;
 #'   * `"newey_west"`: the plug-in of Newey and West (1994), not for `"truncated"`;
 #'   * `"andrews"`: the AR(1) plug-in of Andrews (1991).
 #'
@@ -30,6 +35,17 @@
 #' @param kernel `"bartlett"` (Newey and West 1987), `"parzen"`, `"qs"` (quadratic spectral) or
 #'   `"truncated"`. The first three give positive semidefinite covariances; the last may not,
 #'   and then a warning says so.
+#' @param critical `"t"`: p-values and intervals of the t distribution, which takes the
+#'   long-run variance as known. `"fixed_b"`: for `"bartlett"` without prewhitening, the
+#'   distribution that holds when the bandwidth is a fixed share of the sample (Kiefer and
+#'   Vogelsang 2005), tabulated by simulation; wants more lags, such as `lags = "root"`.
+#' @param terms Number of cosines B, or `"rule"`: \eqn{\lfloor 0.4\, T^{2/3} \rfloor}{floor(0.4 T^(2/3))}.
+#' @param horizon Number of periods that each return spans: with monthly observations of yearly
+#'   returns 12.
+#' @param groups Number q of consecutive groups of periods, as equal in length as they can be.
+#' @param reps Number of resamples for p-values and intervals.
+#' @param block Mean length of a block in periods, or `"auto"` (Politis and White 2004): the longest
+#'   that the terms ask for.
 #' @param prewhiten Whether to fit a first-order vector autoregression first and to recolour
 #'   (Andrews and Monahan 1992).
 #' @param form `"shanken"`: the closed form of Shanken (1992), for errors that are independent
@@ -38,7 +54,8 @@
 #'   influence rows of the premia with the betas' own error in them, summed by `series`
 #'   (Jagannathan and Wang 1998); valid under conditional heteroskedasticity, and on ragged
 #'   panels.
-#' @param series `err_iid()` or `err_hac()`: the sum over periods.
+#' @param series The sum over periods: `err_iid()`, `err_hac()` or `err_overlap()`; with rows (the form
+#'   `"robust"`, `err_moments()`, `err_misspec()`) also `err_cosine()`, `err_groups()` or `err_block()`.
 #' @param by Name of a column that puts assets into clusters (an industry), one value an
 #'   asset, or `NULL`.
 #' @param realised `TRUE`: errors for the premia realised in the sample, given the factors.
@@ -69,6 +86,15 @@
 #' setting of Shanken 1992 and of Raponi, Robotti and Zaffaroni 2020; the sandwich in place of
 #' their plug-in allows for unequal variances and fat tails).
 #'
+#' `err_cosine()` projects the rows on B slow cosines (Lazarus, Lewis, Stock and Watson 2018): t with B
+#' degrees of freedom, joint tests of q restrictions against F with q and B - q + 1. `err_groups()` sums
+#' rows inside q long runs of periods, times q/(q-1), t with q - 1 (Ibragimov and Mueller 2010);
+#' a p-value above 0.083 is then not exact. `err_block()` has the exact variance of the stationary
+#' bootstrap (Politis and Romano 1994), for which nothing is drawn; p-values and symmetric intervals
+#' come from resampled t statistics, with R's random numbers. These three take periods as equally
+#' spaced: a gap in the calendar is closed. `err_overlap()` gives horizon - 1 lags full weight (Hansen
+#' and Hodrick 1980), by the calendar; a variance that is not positive becomes `NA`.
+#'
 #' Clusters in several ways follow Cameron, Gelbach and Miller (2011) and Thompson (2011). The
 #' result need not be positive semidefinite: it is then repaired (negative eigenvalues of the
 #' matrix scaled by heteroskedasticity-consistent errors become zero) with a warning, and a
@@ -85,10 +111,16 @@
 #' @references
 #' Andrews (1991), Econometrica 59, 817-858. Andrews and Monahan (1992), Econometrica 60,
 #' 953-966. Cameron, Gelbach and Miller (2011), Journal of Business & Economic Statistics 29,
-#' 238-249. Hansen (1982), Econometrica 50, 1029-1054. Jagannathan and Wang (1998), Journal of
+#' 238-249. Hansen (1982), Econometrica 50, 1029-1054. Hansen and Hodrick (1980), Journal of Political
+#' Economy 88, 829-853. Ibragimov and Mueller (2010), Journal of Business & Economic Statistics 28,
+#' 453-468. Jagannathan and Wang (1998), Journal of
 #' Finance 53, 1285-1309. Kan, Robotti and Shanken (2013), Journal of Finance 68, 2617-2649.
+#' Kiefer and Vogelsang (2005), Econometric Theory 21, 1130-1164. Lazarus, Lewis, Stock and Watson
+#' (2018), Journal of Business & Economic Statistics 36, 541-559.
 #' MacKinnon and White (1985), Journal of Econometrics 29, 305-325. Newey and West (1987),
-#' Econometrica 55, 703-708; (1994), Review of Economic Studies 61, 631-653. Raponi, Robotti and
+#' Econometrica 55, 703-708; (1994), Review of Economic Studies 61, 631-653. Politis and Romano (1994),
+#' Journal of the American Statistical Association 89, 1303-1313. Politis and White (2004), Econometric
+#' Reviews 23, 53-70, corrected by Patton, Politis and White (2009), 28, 372-375. Raponi, Robotti and
 #' Zaffaroni (2020), Review of Financial Studies 33, 2796-2842. Shanken (1992), Review of Financial Studies 5, 1-33. Thompson (2011), Journal of
 #' Financial Economics 99, 1-10. White (1980), Econometrica 48, 817-838.
 #'
@@ -119,7 +151,12 @@ err_iid <- function(adjust = TRUE) {
 
 #' @rdname error_structures
 #' @export
-err_hac <- function(lags = "rule", kernel = "bartlett", prewhiten = FALSE, adjust = TRUE) {
+err_hac <- function(lags = "rule", kernel = "bartlett", prewhiten = FALSE, adjust = TRUE, critical = "t") {
+  critical <- check_choice(critical, c("t", "fixed_b"), "critical")
+  check_flag(prewhiten, "prewhiten")
+  if (critical == "fixed_b" && (!identical(kernel, "bartlett") || prewhiten)) {
+    abort_input("Fixed-b critical values are for the {.val bartlett} kernel without prewhitening.")
+  }
   kernel <- check_choice(kernel, c("bartlett", "parzen", "qs", "truncated"), "kernel")
   if (is.numeric(lags)) {
     if (length(lags) != 1L || !is.finite(lags) || lags < 0) {
@@ -129,16 +166,50 @@ err_hac <- function(lags = "rule", kernel = "bartlett", prewhiten = FALSE, adjus
       abort_input("{.arg lags} must be a whole number for the {.val {kernel}} kernel.")
     }
   } else {
-    check_choice(lags, c("rule", "newey_west", "andrews"), "lags")
+    check_choice(lags, c("rule", "root", "newey_west", "andrews"), "lags")
     if (kernel == "truncated" && lags == "newey_west") {
       abort_input("The Newey-West (1994) rule has no constant for the truncated kernel: give {.arg lags} as a number, or {.val andrews}.")
     }
   }
   new_errors(
     "lb_err_hac",
-    lags = lags, kernel = kernel, prewhiten = check_flag(prewhiten, "prewhiten"),
-    adjust = check_flag(adjust, "adjust")
+    lags = lags, kernel = kernel, prewhiten = prewhiten, adjust = check_flag(adjust, "adjust"), critical = critical
   )
+}
+
+#' @rdname error_structures
+#' @export
+err_cosine <- function(terms = "rule") {
+  if (!identical(terms, "rule")) check_whole(terms, "terms", 1, 1e6)
+  new_errors("lb_err_cosine", terms = terms)
+}
+
+#' @rdname error_structures
+#' @export
+err_overlap <- function(horizon, adjust = TRUE) {
+  check_whole(horizon, "horizon", 1, 1e6)
+  # A truncated kernel in all but its name.
+  new_errors(
+    c("lb_err_overlap", "lb_err_hac"),
+    lags = horizon - 1, kernel = "truncated", prewhiten = FALSE, adjust = check_flag(adjust, "adjust"), critical = "t"
+  )
+}
+
+#' @rdname error_structures
+#' @export
+err_groups <- function(groups = 10) {
+  check_whole(groups, "groups", 2, 1e6)
+  new_errors("lb_err_groups", groups = groups)
+}
+
+#' @rdname error_structures
+#' @export
+err_block <- function(reps = 999, block = "auto") {
+  check_whole(reps, "reps", 19, 1e7)
+  if (!identical(block, "auto") && !(is.numeric(block) && length(block) == 1L && is.finite(block) && block >= 1)) {
+    abort_input("{.arg block} must be one number of periods, 1 or more, or {.val auto}.")
+  }
+  new_errors("lb_err_block", reps = reps, block = block)
 }
 
 #' @rdname error_structures
@@ -146,20 +217,20 @@ err_hac <- function(lags = "rule", kernel = "bartlett", prewhiten = FALSE, adjus
 err_eiv <- function(form = "shanken", series = err_iid()) {
   new_errors(
     "lb_err_eiv",
-    form = check_choice(form, c("shanken", "robust"), "form"), series = check_series(series)
+    form = check_choice(form, c("shanken", "robust"), "form"), series = check_series(series, resummed = form == "robust")
   )
 }
 
 #' @rdname error_structures
 #' @export
 err_moments <- function(series = err_hac()) {
-  new_errors("lb_err_moments", series = check_series(series))
+  new_errors("lb_err_moments", series = check_series(series, resummed = TRUE))
 }
 
 #' @rdname error_structures
 #' @export
 err_misspec <- function(series = err_iid()) {
-  new_errors("lb_err_misspec", series = check_series(series))
+  new_errors("lb_err_misspec", series = check_series(series, resummed = TRUE))
 }
 
 #' @rdname error_structures
@@ -198,12 +269,18 @@ err_cluster <- function(..., small = "each") {
   )
 }
 
-check_series <- function(series, call = rlang::caller_env()) {
-  if (!inherits(series, c("lb_err_iid", "lb_err_hac"))) {
-    abort_input("{.arg series} must be {.fn err_iid} or {.fn err_hac}.", call = call)
+# `resummed`: whether sums that are no kernel of lags will do.
+check_series <- function(series, resummed = FALSE, call = rlang::caller_env()) {
+  if (inherits(series, c("lb_err_iid", "lb_err_hac")) || resummed && is_resummed(series)) {
+    return(series)
   }
-  series
+  if (resummed) {
+    abort_input("{.arg series} must be a sum over periods: {.fn err_iid}, {.fn err_hac}, {.fn err_overlap}, {.fn err_cosine}, {.fn err_groups} or {.fn err_block}.", call = call)
+  }
+  abort_input("{.arg series} must be {.fn err_iid}, {.fn err_hac} or {.fn err_overlap}.", call = call)
 }
+
+is_resummed <- function(series) inherits(series, c("lb_err_cosine", "lb_err_groups", "lb_err_block"))
 
 check_errors <- function(errors, call = rlang::caller_env()) {
   if (!inherits(errors, "lb_errors")) {
@@ -221,7 +298,11 @@ format.lb_errors <- function(x, ...) {
   lags <- function(x) if (is.numeric(x$lags)) count_of(x$lags, "lag") else lag_rule_name(x$lags)
   switch(class(x)[1L],
     lb_err_iid = "independent",
-    lb_err_hac = paste0(kernel_name(x$kernel), ", ", lags(x), if (x$prewhiten) ", prewhitened"),
+    lb_err_hac = paste0(kernel_name(x$kernel), ", ", lags(x), if (x$prewhiten) ", prewhitened", if (x$critical == "fixed_b") ", fixed-b"),
+    lb_err_overlap = paste0("overlap of ", count_of(x$lags + 1, "period")),
+    lb_err_cosine = paste0("cosines", if (x$terms != "rule") paste0(", ", x$terms)),
+    lb_err_groups = paste0(x$groups, " groups of periods"),
+    lb_err_block = paste0("resampled blocks", if (x$block != "auto") paste0(" of ", format(x$block))),
     lb_err_eiv = paste0(if (x$form == "shanken") "Shanken" else "estimated betas", ", ", format(x$series)),
     lb_err_misspec = paste0("misspecified model, ", format(x$series)),
     lb_err_moments = paste0("stacked moments, ", format(x$series)),
@@ -238,7 +319,7 @@ print.lb_errors <- function(x, ...) {
 }
 
 lag_rule_name <- function(rule) {
-  c(rule = "rule of thumb", newey_west = "Newey-West 1994", andrews = "Andrews 1991")[[rule]]
+  c(rule = "rule of thumb", root = "root rule", newey_west = "Newey-West 1994", andrews = "Andrews 1991")[[rule]]
 }
 
 kernel_name <- function(kernel) {

@@ -345,8 +345,11 @@ alpha_covariance <- function(fit) {
   }
   errors <- fit$errors
   series <- if (is.null(errors$series)) errors else errors$series
+  if (is_resummed(series)) {
+    return(NULL)
+  }
   kind <- switch(class(errors)[1L],
-    lb_err_iid = "series", lb_err_hac = "series", lb_err_moments = "estimated", lb_err_misspec = "misspecified",
+    lb_err_iid = "series", lb_err_hac = "series", lb_err_overlap = "series", lb_err_moments = "estimated", lb_err_misspec = "misspecified",
     lb_err_eiv = if (errors$form == "shanken") "shanken" else "estimated"
   )
   covariance <- two_pass_result(

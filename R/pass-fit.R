@@ -13,7 +13,7 @@
 #' * `tidy()`: a tibble with one row a term and the columns `term`, `estimate`, `std.error`,
 #'   `statistic`, `p.value`, `conf.low`, `conf.high`. Premia are in units of the left side a
 #'   period, for one unit of the characteristic or of beta. p-values and intervals use t with
-#'   the degrees of freedom in `glance()`.
+#'   the degrees of freedom in `glance()`, or the distribution that the error structure names.
 #' * `glance()`: one row: `nobs` (rows used), `n_terms`, `n_periods`, `n_assets`,
 #'   `r.squared` (of averaged premia: the mean over periods), `df`, `errors`, `lags`,
 #'   `bandwidth`, `adjust` (whether T/(T-1) was applied; `NA` for pooled fits) and `method`.
@@ -34,11 +34,10 @@ tidy.lb_fit <- function(x, conf.level = 0.95, ...) {
   check_level(conf.level)
   std_error <- sqrt(diag(x$covariance$vcov))
   statistic <- x$estimate / std_error
-  df <- x$covariance$df
-  reach <- stats::qt((1 + conf.level) / 2, df) * std_error
+  reach <- reference_reach(x$covariance, conf.level, length(x$terms)) * std_error
   tibble::tibble(
     term = x$terms, estimate = unname(x$estimate), std.error = unname(std_error),
-    statistic = unname(statistic), p.value = unname(2 * stats::pt(-abs(statistic), df)),
+    statistic = unname(statistic), p.value = unname(reference_p(x$covariance, statistic)),
     conf.low = unname(x$estimate - reach), conf.high = unname(x$estimate + reach)
   )
 }

@@ -17,7 +17,7 @@ print.lb_premia <- function(x, ...) {
   cat_lines(
     "",
     label_line("Premium", paste0("decimal a ", unit, ", for one unit", if (on_betas) " of beta", average_phrase(x))),
-    label_line("Errors", paste0(x$covariance$phrase, "; t with ", format_df(x$covariance$df), " df")),
+    label_line("Errors", paste0(x$covariance$phrase, "; ", reference_phrase(x$covariance))),
     if (is_moving(x)) beta_error_lines(x),
     weak_factor_line(x),
     sample_lines(x, n_used, unit),
@@ -62,7 +62,7 @@ print.lb_pooled <- function(x, ...) {
   usage <- fit_usage(x)
   cat_lines(
     "",
-    label_line("Errors", paste0(x$covariance$phrase, "; t with ", format_df(x$covariance$df), " df")),
+    label_line("Errors", paste0(x$covariance$phrase, "; ", reference_phrase(x$covariance))),
     sample_lines(x, usage$n_periods, unit),
     label_line("Fit", paste0("R2 ", format(x$r_squared, digits = 3)))
   )

@@ -9,7 +9,8 @@
 #'
 #' @details
 #' The statistic is \eqn{(L\theta - r)'(L V L')^{-}(L\theta - r)/q} with the covariance V of
-#' the fit's error structure, against F with q and the fit's degrees of freedom. When
+#' the fit's error structure, against F with q and the fit's degrees of freedom; with
+#' [err_cosine()] scaled by (B - q + 1)/B, against q and B - q + 1. When
 #' \eqn{LVL'} is singular, as with more restrictions than clusters, its generalised inverse is
 #' used and q is its rank; `note` says so.
 #'
@@ -51,17 +52,35 @@ term_test <- function(fit, ...) {
   if (wald$rank == 0) {
     abort_rank("The restricted combinations have no variance under these errors.")
   }
-  den <- fit$covariance$df
-  statistic <- wald$statistic / wald$rank
+  law <- wald_law(fit$covariance, wald)
   new_test(
-    test = paste(text, collapse = ", "), statistic = statistic, num.df = wald$rank, den.df = den,
-    p.value = stats::pf(statistic, wald$rank, den, lower.tail = FALSE),
-    note = if (wald$rank < length(text)) {
-      paste0(length(text), " restrictions, but rank ", wald$rank, ": generalised inverse")
-    } else {
-      ""
-    },
+    test = paste(text, collapse = ", "), statistic = law$statistic, num.df = wald$rank, den.df = law$den,
+    p.value = law$p,
+    note = paste(c(
+      if (wald$rank < length(text)) paste0(length(text), " restrictions, but rank ", wald$rank, ": generalised inverse"),
+      law$note
+    ), collapse = "; "),
     title = "Linear restrictions", subtitle = paste0("Errors: ", fit$covariance$phrase)
+  )
+}
+
+# F form of a Wald statistic and its p-value. Cosines have a Hotelling scaling; fixed-b values
+# are known for one restriction only, resampled ones for single coefficients.
+wald_law <- function(covariance, wald) {
+  q <- wald$rank
+  den <- covariance$df
+  statistic <- wald$statistic / q
+  if (!is.null(covariance$cosines)) {
+    den <- covariance$cosines - q + 1
+    statistic <- statistic * den / covariance$cosines
+  }
+  kind <- covariance$reference$kind
+  if (identical(kind, "fixed_b") && q == 1) {
+    return(list(statistic = statistic, den = den, p = fixed_b_p(sqrt(statistic), covariance$reference$b), note = "fixed-b p-value"))
+  }
+  list(
+    statistic = statistic, den = den, p = stats::pf(statistic, q, den, lower.tail = FALSE),
+    note = if (!is.null(kind)) "F distribution: the fit's own critical values are for single terms"
   )
 }
 

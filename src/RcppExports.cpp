@@ -474,6 +474,54 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_time_sum
+SEXP cpp_time_sum(const Eigen::Map<Eigen::MatrixXd>& rows, const std::string& kind, double size);
+RcppExport SEXP _lambdabar_cpp_time_sum(SEXP rowsSEXP, SEXP kindSEXP, SEXP sizeSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type rows(rowsSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type kind(kindSEXP);
+    Rcpp::traits::input_parameter< double >::type size(sizeSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_time_sum(rows, kind, size));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_block_length
+double cpp_block_length(const Eigen::Map<Eigen::VectorXd>& series);
+RcppExport SEXP _lambdabar_cpp_block_length(SEXP seriesSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type series(seriesSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_block_length(series));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_resampled_t
+SEXP cpp_resampled_t(const Eigen::Map<Eigen::MatrixXd>& rows, const Rcpp::IntegerMatrix& index, double length, int threads);
+RcppExport SEXP _lambdabar_cpp_resampled_t(SEXP rowsSEXP, SEXP indexSEXP, SEXP lengthSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::MatrixXd>& >::type rows(rowsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerMatrix& >::type index(indexSEXP);
+    Rcpp::traits::input_parameter< double >::type length(lengthSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_resampled_t(rows, index, length, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_scan_breaks
+SEXP cpp_scan_breaks(const Eigen::Map<Eigen::VectorXd>& series, double trim, const Rcpp::List& options, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_scan_breaks(SEXP seriesSEXP, SEXP trimSEXP, SEXP optionsSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::Map<Eigen::VectorXd>& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< double >::type trim(trimSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type options(optionsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_scan_breaks(series, trim, options, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_rank_test
 SEXP cpp_rank_test(const Rcpp::List& input, int rank, const std::string& kind, const Rcpp::List& series, const Rcpp::IntegerVector& slot, const Rcpp::NumericMatrix& signs);
 RcppExport SEXP _lambdabar_cpp_rank_test(SEXP inputSEXP, SEXP rankSEXP, SEXP kindSEXP, SEXP seriesSEXP, SEXP slotSEXP, SEXP signsSEXP) {
@@ -552,6 +600,10 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_usage", (DL_FUNC) &_lambdabar_cpp_usage, 6},
     {"_lambdabar_cpp_linear_predictor", (DL_FUNC) &_lambdabar_cpp_linear_predictor, 4},
     {"_lambdabar_cpp_response", (DL_FUNC) &_lambdabar_cpp_response, 3},
+    {"_lambdabar_cpp_time_sum", (DL_FUNC) &_lambdabar_cpp_time_sum, 3},
+    {"_lambdabar_cpp_block_length", (DL_FUNC) &_lambdabar_cpp_block_length, 1},
+    {"_lambdabar_cpp_resampled_t", (DL_FUNC) &_lambdabar_cpp_resampled_t, 4},
+    {"_lambdabar_cpp_scan_breaks", (DL_FUNC) &_lambdabar_cpp_scan_breaks, 4},
     {"_lambdabar_cpp_rank_test", (DL_FUNC) &_lambdabar_cpp_rank_test, 6},
     {"_lambdabar_cpp_premium_sets", (DL_FUNC) &_lambdabar_cpp_premium_sets, 3},
     {"_lambdabar_cpp_premium_set_by_scan", (DL_FUNC) &_lambdabar_cpp_premium_set_by_scan, 5},

@@ -13,6 +13,7 @@ inline lambdabar::SeriesOptions series_options(const Rcpp::List& options) {
                : kernel == "truncated" ? lambdabar::Kernel::truncated
                                        : lambdabar::Kernel::bartlett;
   out.rule = rule == "rule"         ? lambdabar::LagRule::rule_of_thumb
+             : rule == "root"       ? lambdabar::LagRule::root
              : rule == "newey_west" ? lambdabar::LagRule::newey_west
              : rule == "andrews"    ? lambdabar::LagRule::andrews
                                     : lambdabar::LagRule::fixed;

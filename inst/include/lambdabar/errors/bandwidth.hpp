@@ -1,4 +1,5 @@
-// How many lags: fixed, the rule of thumb floor(4 (T/100)^(2/9)), and two data-driven
+// How many lags: fixed, the rules of thumb floor(4 (T/100)^(2/9)) and ceil(1.3 sqrt(T)) - 1
+// (Lazarus, Lewis, Stock and Watson 2018, for fixed-b critical values), and two data-driven
 // rules.
 //
 // Newey and West (1994), on the combination x_t = v'h_t, with s_j its autocovariances:
@@ -29,7 +30,7 @@
 
 namespace lambdabar {
 
-enum class LagRule { fixed, rule_of_thumb, newey_west, andrews };
+enum class LagRule { fixed, rule_of_thumb, root, newey_west, andrews };
 
 struct SeriesOptions {
   Kernel kernel = Kernel::bartlett;
@@ -170,6 +171,11 @@ inline Bandwidth choose_bandwidth(const Matrix& series,
       return detail::from_lags(
           options.kernel, std::floor(4.0 * std::pow(hundreds, 2.0 / 9.0)), longest);
     }
+    case LagRule::root:
+      return detail::from_lags(
+          options.kernel,
+          std::ceil(1.3 * std::sqrt(static_cast<double>(n_periods))) - 1.0,
+          longest);
     case LagRule::newey_west: {
       detail::check_weights(weights, series.cols());
       const detail::PlugIn rule =

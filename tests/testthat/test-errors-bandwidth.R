@@ -1,0 +1,23 @@
+test_that("a bandwidth path is the fit restated with each number of lags", {
+  fit <- price_factors(factor_panel(), ret ~ f1 + f2)
+  path <- bandwidth_path(fit, lags = c(0, 5))
+  direct <- generics::tidy(restate(fit, err_hac(5)))
+  expect_equal(path$std.error[path$lags == 5], direct$std.error)
+  expect_equal(path$fixed_b.p.value[path$lags == 5], fixed_b_p(direct$statistic, 0.1))
+  robust <- restate(fit, err_eiv("robust"))
+  path <- bandwidth_path(robust, lags = 3)
+  expect_equal(path$std.error, generics::tidy(restate(fit, err_eiv("robust", err_hac(3))))$std.error)
+  expect_output(print(bandwidth_path(fit)), "Rules")
+  expect_error(bandwidth_path(fit, lags = 60), class = "lambdabar_error_input")
+  expect_error(bandwidth_path(pooled(small_panel(), ret ~ size)), class = "lambdabar_error_unsupported")
+})
+
+test_that("a premium whose significance turns with the lags is named", {
+  set.seed(2)
+  slow <- as.numeric(stats::filter(rnorm(120, 0, 0.2), 0.9, "recursive"))
+  fit <- price_traits(slope_panel(cbind(3, slow - mean(slow) + 0.12)), y ~ x1)
+  path <- bandwidth_path(fit)
+  significant <- abs(path$statistic[path$term == "x1"]) > qt(0.975, 119)
+  expect_true(any(significant) && !all(significant))
+  expect_output(print(path), "Whether x1 is significant depends")
+})
