@@ -157,6 +157,30 @@ cpp_scan_breaks <- function(series, trim, options, slot) {
     .Call(`_lambdabar_cpp_scan_breaks`, series, trim, options, slot)
 }
 
+cpp_latent <- function(returns, observed, counts, rule, most, intercept, series, slot) {
+    .Call(`_lambdabar_cpp_latent`, returns, observed, counts, rule, most, intercept, series, slot)
+}
+
+cpp_squared_sharpe <- function(factors) {
+    .Call(`_lambdabar_cpp_squared_sharpe`, factors)
+}
+
+cpp_best_model <- function(delta, V, normal) {
+    .Call(`_lambdabar_cpp_best_model`, delta, V, normal)
+}
+
+cpp_grs <- function(returns, factors) {
+    .Call(`_lambdabar_cpp_grs`, returns, factors)
+}
+
+cpp_spanning <- function(returns, benchmarks, series, slot) {
+    .Call(`_lambdabar_cpp_spanning`, returns, benchmarks, series, slot)
+}
+
+cpp_frontier <- function(returns, adjust) {
+    .Call(`_lambdabar_cpp_frontier`, returns, adjust)
+}
+
 cpp_rank_test <- function(input, rank, kind, series, slot, signs) {
     .Call(`_lambdabar_cpp_rank_test`, input, rank, kind, series, slot, signs)
 }

@@ -40,11 +40,11 @@ bandwidth_path <- function(fit, lags = NULL, kernel = "bartlett", level = 0.95) 
     restated <- under(lags = lag)
     out <- tidy(restated)[c("term", "estimate", "std.error", "statistic", "p.value")]
     if (kernel == "bartlett") out$fixed_b.p.value <- fixed_b_p(out$statistic, (lag + 1) / T)
-    cbind(lags = lag, out)
+    tibble::tibble(lags = lag, out)
   })
   rules <- if (kernel == "truncated") c("rule", "andrews") else c("rule", "newey_west", "andrews", "root")
   chosen <- vapply(rules, function(rule) under(lags = rule)$covariance$lags, 1)
-  out <- tibble::as_tibble(do.call(rbind, rows))
+  out <- vctrs::vec_rbind(!!!rows)
   structure(
     out, chosen = chosen, level = level, df = T - 1, n_periods = T, kernel = kernel,
     title = deparse1(fit$formula), class = c("lb_bandwidth", class(out))

@@ -43,7 +43,10 @@ error_ladder <- function(fit, ..., terms = NULL) {
     abort_input("There is no term {.val {unknown}}; the terms are {.val {fit$terms}}.", term = unknown)
   }
   fits <- ladder_fits(fit)
-  rungs <- lapply(fits, function(one) climb(one, c(ladder_structures(one), more), terms))
+  rungs <- lapply(fits, function(one) {
+    structures <- c(ladder_structures(one), more)
+    climb(one, structures[!duplicated(structures)], terms)
+  })
   out <- do.call(rbind, rungs)
   out <- out[order(match(out$term, terms)), ]
   reading <- vapply(terms, function(term) read_ladder(out[out$term == term, ]), "")

@@ -51,6 +51,8 @@ refuse_errors <- function(errors, fit, advice, call) {
 fit_kind <- function(fit) {
   if (inherits(fit, "lb_pooled")) {
     "a pooled regression"
+  } else if (inherits(fit, "lb_latent")) {
+    "premia beside latent factors"
   } else if (is_two_pass(fit)) {
     "premia on estimated betas"
   } else if (!is.null(fit$asset_rows)) {
@@ -285,6 +287,8 @@ series_phrase <- function(series, sum) {
   what <- "variation of the premia over time"
   if (inherits(series, "lb_err_iid")) {
     what <- paste0(what, ", periods independent")
+  } else if (inherits(series, "lb_err_overlap")) {
+    what <- paste0(what, ", full weight on ", count_of(series$lags, "lag"), " of overlap (Hansen-Hodrick 1980)")
   } else {
     size <- if (series$kernel == "qs" || sum$lags != floor(sum$lags)) {
       paste0("bandwidth ", format(sum$bandwidth, digits = 3))

@@ -522,6 +522,80 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_latent
+SEXP cpp_latent(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& observed, const Rcpp::IntegerVector& counts, const std::string& rule, int most, bool intercept, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_latent(SEXP returnsSEXP, SEXP observedSEXP, SEXP countsSEXP, SEXP ruleSEXP, SEXP mostSEXP, SEXP interceptSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type returns(returnsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type observed(observedSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type counts(countsSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type rule(ruleSEXP);
+    Rcpp::traits::input_parameter< int >::type most(mostSEXP);
+    Rcpp::traits::input_parameter< bool >::type intercept(interceptSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_latent(returns, observed, counts, rule, most, intercept, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_squared_sharpe
+SEXP cpp_squared_sharpe(const Rcpp::NumericMatrix& factors);
+RcppExport SEXP _lambdabar_cpp_squared_sharpe(SEXP factorsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type factors(factorsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_squared_sharpe(factors));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_best_model
+SEXP cpp_best_model(const Eigen::VectorXd& delta, const Eigen::MatrixXd& V, const Rcpp::NumericMatrix& normal);
+RcppExport SEXP _lambdabar_cpp_best_model(SEXP deltaSEXP, SEXP VSEXP, SEXP normalSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type delta(deltaSEXP);
+    Rcpp::traits::input_parameter< const Eigen::MatrixXd& >::type V(VSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type normal(normalSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_best_model(delta, V, normal));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_grs
+SEXP cpp_grs(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& factors);
+RcppExport SEXP _lambdabar_cpp_grs(SEXP returnsSEXP, SEXP factorsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type returns(returnsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type factors(factorsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_grs(returns, factors));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_spanning
+SEXP cpp_spanning(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& benchmarks, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
+RcppExport SEXP _lambdabar_cpp_spanning(SEXP returnsSEXP, SEXP benchmarksSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type returns(returnsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type benchmarks(benchmarksSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_spanning(returns, benchmarks, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_frontier
+SEXP cpp_frontier(const Rcpp::NumericMatrix& returns, bool adjust);
+RcppExport SEXP _lambdabar_cpp_frontier(SEXP returnsSEXP, SEXP adjustSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type returns(returnsSEXP);
+    Rcpp::traits::input_parameter< bool >::type adjust(adjustSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_frontier(returns, adjust));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_rank_test
 SEXP cpp_rank_test(const Rcpp::List& input, int rank, const std::string& kind, const Rcpp::List& series, const Rcpp::IntegerVector& slot, const Rcpp::NumericMatrix& signs);
 RcppExport SEXP _lambdabar_cpp_rank_test(SEXP inputSEXP, SEXP rankSEXP, SEXP kindSEXP, SEXP seriesSEXP, SEXP slotSEXP, SEXP signsSEXP) {
@@ -604,6 +678,12 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_block_length", (DL_FUNC) &_lambdabar_cpp_block_length, 1},
     {"_lambdabar_cpp_resampled_t", (DL_FUNC) &_lambdabar_cpp_resampled_t, 4},
     {"_lambdabar_cpp_scan_breaks", (DL_FUNC) &_lambdabar_cpp_scan_breaks, 4},
+    {"_lambdabar_cpp_latent", (DL_FUNC) &_lambdabar_cpp_latent, 8},
+    {"_lambdabar_cpp_squared_sharpe", (DL_FUNC) &_lambdabar_cpp_squared_sharpe, 1},
+    {"_lambdabar_cpp_best_model", (DL_FUNC) &_lambdabar_cpp_best_model, 3},
+    {"_lambdabar_cpp_grs", (DL_FUNC) &_lambdabar_cpp_grs, 2},
+    {"_lambdabar_cpp_spanning", (DL_FUNC) &_lambdabar_cpp_spanning, 4},
+    {"_lambdabar_cpp_frontier", (DL_FUNC) &_lambdabar_cpp_frontier, 2},
     {"_lambdabar_cpp_rank_test", (DL_FUNC) &_lambdabar_cpp_rank_test, 6},
     {"_lambdabar_cpp_premium_sets", (DL_FUNC) &_lambdabar_cpp_premium_sets, 3},
     {"_lambdabar_cpp_premium_set_by_scan", (DL_FUNC) &_lambdabar_cpp_premium_set_by_scan, 5},
