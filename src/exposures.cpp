@@ -39,8 +39,8 @@ lambdabar::ExposureOptions exposure_options(const Rcpp::List& settings) {
 }  // namespace
 
 // data: y, weight (parts), asset, period, n_assets, slot (0-based, one a period), factors
-// (slots x K). queries: asset, time, data_asset, last_slot, all 0-based; -1 marks an asset
-// that is not in the data. wanted: which columns to fill.
+// (slots x K). queries: asset, time, data_asset, last_slot, all 0-based; -1 marks an
+// asset that is not in the data. wanted: which columns to fill.
 // [[Rcpp::export(rng = false)]]
 SEXP cpp_exposures(const Rcpp::List& data,
                    const Rcpp::List& queries,
@@ -49,9 +49,15 @@ SEXP cpp_exposures(const Rcpp::List& data,
   return guarded([&]() -> SEXP {
     const Rcpp::IntegerVector asset = data["asset"], period = data["period"];
     const Rcpp::NumericMatrix factors = data["factors"];
-    lambdabar::ExposureData view{
-        {}, {}, nullptr, nullptr, 0, 0, {},
-        Eigen::Map<const Eigen::MatrixXd>(factors.begin(), factors.nrow(), factors.ncol())};
+    lambdabar::ExposureData view{{},
+                                 {},
+                                 nullptr,
+                                 nullptr,
+                                 0,
+                                 0,
+                                 {},
+                                 Eigen::Map<const Eigen::MatrixXd>(
+                                     factors.begin(), factors.nrow(), factors.ncol())};
     view.n_rows = asset.size();
     view.returns = view_column(Rcpp::as<Rcpp::List>(data["y"]), view.n_rows);
     SEXP weight = data["weight"];
@@ -114,9 +120,10 @@ Rcpp::List cpp_shrink_betas(const Rcpp::NumericMatrix& beta,
                             const Rcpp::IntegerVector& date,
                             int n_dates,
                             const std::string& rule) {
-  const auto prior_rule = rule == "net"            ? lambdabar::PriorVariance::net
-                          : rule == "paule_mandel" ? lambdabar::PriorVariance::paule_mandel
-                                                   : lambdabar::PriorVariance::raw;
+  const auto prior_rule = rule == "net" ? lambdabar::PriorVariance::net
+                          : rule == "paule_mandel"
+                              ? lambdabar::PriorVariance::paule_mandel
+                              : lambdabar::PriorVariance::raw;
   Rcpp::NumericMatrix b = Rcpp::clone(beta), se = Rcpp::clone(std_error);
   Rcpp::NumericMatrix mean(n_dates, b.ncol()), variance(n_dates, b.ncol());
   for (int k = 0; k < b.ncol(); ++k) {

@@ -61,7 +61,8 @@ SEXP cpp_joint_zero(const Eigen::VectorXd& value,
                     const Rcpp::IntegerVector& slot) {
   return guarded([&]() -> SEXP {
     return Rcpp::wrap(
-        lambdabar::joint_zero(value, rows, as_indices(slot), series_options(series)).value);
+        lambdabar::joint_zero(value, rows, as_indices(slot), series_options(series))
+            .value);
   });
 }
 
@@ -72,8 +73,11 @@ SEXP cpp_discount_factor(const Rcpp::List& input,
                          const Rcpp::IntegerVector& slot) {
   return guarded([&]() -> SEXP {
     const TwoPassInput view(input);
-    const auto m = lambdabar::discount_factor(
-        view.data.returns, view.data.factors, gross, series_options(series), as_indices(slot));
+    const auto m = lambdabar::discount_factor(view.data.returns,
+                                              view.data.factors,
+                                              gross,
+                                              series_options(series),
+                                              as_indices(slot));
     return Rcpp::List::create(Rcpp::_["b"] = m.b,
                               Rcpp::_["rows"] = m.rows,
                               Rcpp::_["usual_rows"] = m.usual_rows,
@@ -90,8 +94,8 @@ SEXP cpp_efficient_moments(const Rcpp::List& input,
   return guarded([&]() -> SEXP {
     const WeightedInput view(input, false);
     const auto fit = lambdabar::two_pass(view.data, view.options);
-    const auto found =
-        lambdabar::efficient_moments(view.data, fit, series_options(series), as_indices(slot));
+    const auto found = lambdabar::efficient_moments(
+        view.data, fit, series_options(series), as_indices(slot));
     return Rcpp::List::create(Rcpp::_["premia"] = found.premia,
                               Rcpp::_["covariance"] = found.covariance,
                               Rcpp::_["J"] = found.J,

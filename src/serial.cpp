@@ -9,11 +9,14 @@ using lambdabar::Index;
 
 // kind: cosine, blocks, geometric; size: cosines, groups, mean block length.
 // [[Rcpp::export(rng = false)]]
-SEXP cpp_time_sum(const Eigen::Map<Eigen::MatrixXd>& rows, const std::string& kind, double size) {
+SEXP cpp_time_sum(const Eigen::Map<Eigen::MatrixXd>& rows,
+                  const std::string& kind,
+                  double size) {
   return guarded([&]() -> SEXP {
     if (kind == "cosine")
       return Rcpp::wrap(lambdabar::cosine_sum(rows, static_cast<Index>(size)));
-    if (kind == "blocks") return Rcpp::wrap(lambdabar::block_sum(rows, static_cast<Index>(size)));
+    if (kind == "blocks")
+      return Rcpp::wrap(lambdabar::block_sum(rows, static_cast<Index>(size)));
     return Rcpp::wrap(lambdabar::geometric_sum(rows, size));
   });
 }

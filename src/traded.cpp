@@ -13,7 +13,9 @@ using ConstMap = Eigen::Map<const Eigen::MatrixXd>;
 
 namespace {
 
-ConstMap view(const Rcpp::NumericMatrix& x) { return ConstMap(x.begin(), x.nrow(), x.ncol()); }
+ConstMap view(const Rcpp::NumericMatrix& x) {
+  return ConstMap(x.begin(), x.nrow(), x.ncol());
+}
 
 }  // namespace
 
@@ -78,7 +80,8 @@ SEXP cpp_best_model(const Eigen::VectorXd& delta,
                     const Rcpp::NumericMatrix& normal) {
   return guarded([&]() -> SEXP {
     const auto test = lambdabar::best_model_test(delta, V, view(normal));
-    return Rcpp::List::create(Rcpp::_["statistic"] = test.statistic, Rcpp::_["p"] = test.p);
+    return Rcpp::List::create(Rcpp::_["statistic"] = test.statistic,
+                              Rcpp::_["p"] = test.p);
   });
 }
 
@@ -86,8 +89,8 @@ SEXP cpp_best_model(const Eigen::VectorXd& delta,
 // [[Rcpp::export(rng = false)]]
 SEXP cpp_grs(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& factors) {
   return guarded([&]() -> SEXP {
-    const auto test =
-        lambdabar::intercept_tests(view(returns), view(factors), {lambdabar::AlphaKind::grs})[0];
+    const auto test = lambdabar::intercept_tests(
+        view(returns), view(factors), {lambdabar::AlphaKind::grs})[0];
     return Rcpp::List::create(Rcpp::_["statistic"] = test.statistic,
                               Rcpp::_["df1"] = test.df1,
                               Rcpp::_["df2"] = test.df2);
@@ -113,8 +116,8 @@ SEXP cpp_spanning(const Rcpp::NumericMatrix& returns,
 // [[Rcpp::export(rng = false)]]
 SEXP cpp_frontier(const Rcpp::NumericMatrix& returns, bool adjust) {
   return guarded([&]() -> SEXP {
-    const auto found =
-        lambdabar::mean_variance_frontier(view(returns), returns.nrow() - (adjust ? 1.0 : 0.0));
+    const auto found = lambdabar::mean_variance_frontier(
+        view(returns), returns.nrow() - (adjust ? 1.0 : 0.0));
     return Rcpp::List::create(Rcpp::_["least_variance"] = found.least_variance,
                               Rcpp::_["least_mean"] = found.least_mean,
                               Rcpp::_["curvature"] = found.curvature,

@@ -10,10 +10,14 @@ namespace {
 
 const char* shape_name(lambdabar::SetShape shape) {
   switch (shape) {
-    case lambdabar::SetShape::empty: return "empty";
-    case lambdabar::SetShape::interval: return "interval";
-    case lambdabar::SetShape::rays: return "rays";
-    case lambdabar::SetShape::line: return "line";
+    case lambdabar::SetShape::empty:
+      return "empty";
+    case lambdabar::SetShape::interval:
+      return "interval";
+    case lambdabar::SetShape::rays:
+      return "rays";
+    case lambdabar::SetShape::line:
+      return "line";
   }
   return "empty";
 }

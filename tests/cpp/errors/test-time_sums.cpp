@@ -41,7 +41,8 @@ TEST(TimeSums, ResampledStatisticsAreTheSameOnAnyNumberOfThreads) {
   const Matrix rows = centred_rows(40, 2);
   std::vector<int> index;
   for (int i = 0; i < 40 * 50; ++i) index.push_back((i * 17 + i / 40) % 40);
-  const Matrix one = resampled_t(rows, index, 4.0, 1), four = resampled_t(rows, index, 4.0, 4);
+  const Matrix one = resampled_t(rows, index, 4.0, 1),
+               four = resampled_t(rows, index, 4.0, 4);
   EXPECT_TRUE((one.array() == four.array()).all());
 }
 
@@ -54,7 +55,8 @@ TEST(TimeSums, BlockLengthsStayInTheirBounds) {
 
 TEST(Breaks, AStepIsFoundWhereItIs) {
   Vector x(60);
-  for (Index t = 0; t < 60; ++t) x(t) = (t >= 25 ? 1.0 : 0.0) + 0.1 * std::sin(3.0 * static_cast<double>(t));
+  for (Index t = 0; t < 60; ++t)
+    x(t) = (t >= 25 ? 1.0 : 0.0) + 0.1 * std::sin(3.0 * static_cast<double>(t));
   const BreakScan scan = scan_breaks(x, 0.15, {}, {});
   Index best = 0;
   scan.wald.maxCoeff(&best);

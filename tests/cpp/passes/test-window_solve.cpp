@@ -28,10 +28,12 @@ struct Windows {
       Matrix z(30, K + 1);
       for (Index i = 0; i < z.size(); ++i) z.data()[i] = normal(random);
       const Vector m = z.colwise().mean();
-      const Matrix C = (z.rowwise() - m.transpose()).transpose() * (z.rowwise() - m.transpose());
+      const Matrix C =
+          (z.rowwise() - m.transpose()).transpose() * (z.rowwise() - m.transpose());
       for (int i = 0; i <= K; ++i) {
         mean[static_cast<std::size_t>(i)](lane) = m(i);
-        for (int j = 0; j <= i; ++j) S[static_cast<std::size_t>(packed_at(i, j))](lane) = C(i, j);
+        for (int j = 0; j <= i; ++j)
+          S[static_cast<std::size_t>(packed_at(i, j))](lane) = C(i, j);
       }
     }
   }

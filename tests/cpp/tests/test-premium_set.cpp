@@ -73,8 +73,10 @@ TEST(PremiumSets, TheScanFindsTheClosedSetOfManyPeriodsNearly) {
 
 TEST(RankTest, FormsAgreeOnTheirRootsAndBootstrapCounts) {
   const simulated::Panel p = simulated::panel(100, 6, 2, 10);
-  const RankTest cd = rank_test(p.returns, p.factors, true, 1, RankKind::cragg_donald, {}, {}, no_signs(100));
-  const RankTest bartlett = rank_test(p.returns, p.factors, true, 1, RankKind::bartlett, {}, {}, no_signs(100));
+  const RankTest cd = rank_test(
+      p.returns, p.factors, true, 1, RankKind::cragg_donald, {}, {}, no_signs(100));
+  const RankTest bartlett =
+      rank_test(p.returns, p.factors, true, 1, RankKind::bartlett, {}, {}, no_signs(100));
   const double d = cd.statistic / 100.0;
   EXPECT_NEAR(bartlett.statistic, (99.0 - 0.5 * 8.0) * std::log1p(d), 1e-10);
   EXPECT_EQ(cd.df, 4.0);
@@ -83,7 +85,8 @@ TEST(RankTest, FormsAgreeOnTheirRootsAndBootstrapCounts) {
   for (Index j = 0; j < 19; ++j)
     for (Index t = 0; t < 100; ++t)
       if ((t * 7 + j * 13 + t * j) % 3 == 0) signs(t, j) = -1.0;
-  const RankTest drawn = rank_test(p.returns, p.factors, true, 1, RankKind::kleibergen_paap, {}, {}, signs);
+  const RankTest drawn =
+      rank_test(p.returns, p.factors, true, 1, RankKind::kleibergen_paap, {}, {}, signs);
   EXPECT_GE(drawn.p_bootstrap, 1.0 / 20.0);
   EXPECT_LE(drawn.p_bootstrap, 1.0);
 }
@@ -91,6 +94,22 @@ TEST(RankTest, FormsAgreeOnTheirRootsAndBootstrapCounts) {
 TEST(RankTest, RefusesTooFewAssetsOrPeriods) {
   const simulated::Panel p = simulated::panel(12, 3, 2, 11);
   const simulated::Panel short_panel = simulated::panel(9, 8, 1, 11);
-  EXPECT_THROW(rank_test(p.returns.leftCols(2), p.factors, true, 1, RankKind::bartlett, {}, {}, no_signs(12)), Error);
-  EXPECT_THROW(rank_test(short_panel.returns, short_panel.factors, false, 0, RankKind::bartlett, {}, {}, no_signs(9)), Error);
+  EXPECT_THROW(rank_test(p.returns.leftCols(2),
+                         p.factors,
+                         true,
+                         1,
+                         RankKind::bartlett,
+                         {},
+                         {},
+                         no_signs(12)),
+               Error);
+  EXPECT_THROW(rank_test(short_panel.returns,
+                         short_panel.factors,
+                         false,
+                         0,
+                         RankKind::bartlett,
+                         {},
+                         {},
+                         no_signs(9)),
+               Error);
 }

@@ -58,8 +58,8 @@ TEST(DiscountFactor, IsTheGlsEstimateFromTheOtherSide) {
   EXPECT_NEAR(m.distance_rows.sum(), 0.0, 1e-10);
   const CovariancePrices prices = covariance_prices(e.fit);
   EXPECT_LT((prices.b - m.b).norm(), 1e-9 * m.b.norm());
-  EXPECT_THROW(
-      discount_factor(p.returns.topRows(8), p.factors.topRows(8), false, {}, {}), Error);
+  EXPECT_THROW(discount_factor(p.returns.topRows(8), p.factors.topRows(8), false, {}, {}),
+               Error);
 }
 
 TEST(EfficientMoments, RefusesWhatHasNoDegreesOfFreedom) {

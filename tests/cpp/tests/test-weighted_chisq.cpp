@@ -30,7 +30,8 @@ double hypoexponential_tail(const Vector& lambda, double x) {
 TEST(WeightedChisq, EqualWeightsAreAChiSquare) {
   // Upper 5 % points: from memory, any table of the distribution.
   EXPECT_NEAR(weighted_chisq_tail(weights({1}), 3.841458820694124), 0.05, 1e-12);
-  EXPECT_NEAR(weighted_chisq_tail(weights({2, 2, 2}), 2 * 7.814727903251178), 0.05, 1e-12);
+  EXPECT_NEAR(
+      weighted_chisq_tail(weights({2, 2, 2}), 2 * 7.814727903251178), 0.05, 1e-12);
   EXPECT_NEAR(weighted_chisq_tail(Vector::Ones(10), 18.307038053275147), 0.05, 1e-12);
 }
 
@@ -53,13 +54,15 @@ TEST(WeightedChisq, TinyWeightsArePutAtTheirMean) {
   EXPECT_NEAR(weighted_chisq_tail(weights({1, 1, 1e-6, 1e-6}), x),
               hypoexponential_tail(weights({1, 1e-6}), x),
               1e-10);
-  EXPECT_EQ(weighted_chisq_tail(weights({1, 0, 0}), x), weighted_chisq_tail(weights({1}), x));
+  EXPECT_EQ(weighted_chisq_tail(weights({1, 0, 0}), x),
+            weighted_chisq_tail(weights({1}), x));
 }
 
 TEST(WeightedChisq, ManyWeightsDoNotUnderflow) {
   // 600 weights from 1 to 1000: close to normal, about the mean.
   Vector lambda(600);
-  for (Index i = 0; i < 600; ++i) lambda(i) = std::pow(1000.0, static_cast<double>(i) / 599.0);
+  for (Index i = 0; i < 600; ++i)
+    lambda(i) = std::pow(1000.0, static_cast<double>(i) / 599.0);
   const double p = weighted_chisq_tail(lambda, lambda.sum());
   EXPECT_GT(p, 0.45);
   EXPECT_LT(p, 0.5);

@@ -1,16 +1,18 @@
-// Other ways to sum influence rows h_t over periods, T x P, taken as equally spaced (a gap in
-// the calendar is closed).
+// Other ways to sum influence rows h_t over periods, T x P, taken as equally spaced (a
+// gap in the calendar is closed).
 //   cosine    sum_{j<=B} L_j L_j' / B, L_j = sqrt(2) sum_t cos(pi j (t - 1/2) / T) h_t
 //             (Lazarus, Lewis, Stock and Watson 2018, Journal of Business & Economic
 //             Statistics 36, 541-559): t with B degrees of freedom; B = T - 1 gives
 //             independent periods times T/(T-1)
-//   blocks    q/(q-1) sum over q runs of periods of (sum of rows)(sum of rows)', runs end at
+//   blocks    q/(q-1) sum over q runs of periods of (sum of rows)(sum of rows)', runs end
+//   at
 //             floor(j T / q) (Ibragimov and Mueller 2010, Journal of Business & Economic
 //             Statistics 28, 453-468): t with q - 1
-//   geometric sum_l k(l) sum_t h_t h_{t+l}', k(l) = (1 - l/T) r^l + (l/T) r^(T-l): the exact
+//   geometric sum_l k(l) sum_t h_t h_{t+l}', k(l) = (1 - l/T) r^l + (l/T) r^(T-l): the
+//   exact
 //             variance of the stationary bootstrap with blocks of mean length 1 / (1 - r)
-//             (Politis and Romano 1994, Journal of the American Statistical Association 89,
-//             1303-1313); nothing is drawn
+//             (Politis and Romano 1994, Journal of the American Statistical Association
+//             89, 1303-1313); nothing is drawn
 // Cost O(T B P + B P^2), O(T P + q P^2), O(T^2 P).
 #pragma once
 
@@ -24,10 +26,11 @@ namespace lambdabar {
 inline Matrix cosine_sum(const Eigen::Ref<const Matrix>& rows, Index n_terms) {
   const Index T = rows.rows();
   if (n_terms < 1 || n_terms > T - 1)
-    throw Error("too_few",
-                "The number of cosines must lie between 1 and the number of periods less one.",
-                {{"n_terms", static_cast<double>(n_terms)},
-                 {"n_periods", static_cast<double>(T)}});
+    throw Error(
+        "too_few",
+        "The number of cosines must lie between 1 and the number of periods less one.",
+        {{"n_terms", static_cast<double>(n_terms)},
+         {"n_periods", static_cast<double>(T)}});
   const double pi = std::acos(-1.0), n = static_cast<double>(T);
   Matrix waves(n_terms, T);
   for (Index j = 0; j < n_terms; ++j)
@@ -73,17 +76,18 @@ inline Matrix geometric_sum(const Eigen::Ref<const Matrix>& rows, double length)
   const Index T = rows.rows();
   const Vector weights = detail::geometric_weights(T, length);
   Matrix past = Matrix::Zero(T, rows.cols());
-  for (Index l = 1; l < T; ++l) past.bottomRows(T - l) += weights(l) * rows.topRows(T - l);
+  for (Index l = 1; l < T; ++l)
+    past.bottomRows(T - l) += weights(l) * rows.topRows(T - l);
   const Matrix one_sided = rows.transpose() * past;
   return outer_sum(rows) + one_sided + one_sided.transpose();
 }
 
 // Mean block length for the stationary bootstrap of a mean (Politis and White 2004,
 // Econometric Reviews 23, 53-70; corrected by Patton, Politis and White 2009, ibid. 28,
-// 372-375): (2 G^2 / D)^(1/3) T^(1/3), D = 2 g^2, g = sum lambda R, G = sum lambda |k| R, R
-// autocovariances, lambda a flat top of width M = min(2 m, ceil(sqrt T) + K), m the first lag
-// after which K = max(5, ceil(sqrt(log10 T))) autocorrelations stay below
-// 2 sqrt(log10(T) / T). Between 1 and ceil(min(3 sqrt T, T / 3)).
+// 372-375): (2 G^2 / D)^(1/3) T^(1/3), D = 2 g^2, g = sum lambda R, G = sum lambda |k| R,
+// R autocovariances, lambda a flat top of width M = min(2 m, ceil(sqrt T) + K), m the
+// first lag after which K = max(5, ceil(sqrt(log10 T))) autocorrelations stay below 2
+// sqrt(log10(T) / T). Between 1 and ceil(min(3 sqrt T, T / 3)).
 inline double block_length(const Eigen::Ref<const Vector>& series) {
   const Index T = series.size();
   const double n = static_cast<double>(T);
@@ -119,8 +123,8 @@ inline double block_length(const Eigen::Ref<const Vector>& series) {
   return std::isfinite(length) ? std::min(std::max(length, 1.0), longest) : longest;
 }
 
-// t statistics of resampled means, P a draw: sum of the drawn rows over the root of their own
-// geometric_sum() about their mean. index: T x draws, 0-based.
+// t statistics of resampled means, P a draw: sum of the drawn rows over the root of their
+// own geometric_sum() about their mean. index: T x draws, 0-based.
 inline Matrix resampled_t(const Eigen::Ref<const Matrix>& rows,
                           const std::vector<int>& index,
                           double length,

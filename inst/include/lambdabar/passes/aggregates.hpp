@@ -1,16 +1,17 @@
-// Weighted moments of z = (f_1 .. f_K, y) that grow by one row or by another aggregate and
-// never shrink: weight W, means m, centred cross-products S.
+// Weighted moments of z = (f_1 .. f_K, y) that grow by one row or by another aggregate
+// and never shrink: weight W, means m, centred cross-products S.
 //   row:    d = z - m,    m += d w / (W + w),       S += d d' w W / (W + w)
 //   merge:  d = mb - ma,  m = ma + d Wb / (Wa + Wb), S = Sa + Sb + d d' Wa Wb / (Wa + Wb)
-// (Chan, Golub and LeVeque 1983, American Statistician 37, 242-247). Nothing is subtracted
-// from S, so a row of any size that is not in an aggregate has left no trace in it.
+// (Chan, Golub and LeVeque 1983, American Statistician 37, 242-247). Nothing is
+// subtracted from S, so a row of any size that is not in an aggregate has left no trace
+// in it.
 //
-// Values are taken from an anchor, a row of the aggregate itself: with a mean of a million
-// times the spread the differences keep the digits that the values have.
+// Values are taken from an anchor, a row of the aggregate itself: with a mean of a
+// million times the spread the differences keep the digits that the values have.
 //
 // An aggregate is an array: W, m (K + 1), S (lower triangle by rows, y in the last one).
-// `Fixed` is K when the compiler may know it, 0 for any K. Cost (K + 1)(K + 2) / 2 multiply-
-// adds a row or merge.
+// `Fixed` is K when the compiler may know it, 0 for any K. Cost (K + 1)(K + 2) / 2
+// multiply- adds a row or merge.
 #pragma once
 
 #include "../base.hpp"
@@ -53,8 +54,8 @@ void call_triangle(const F& f, std::integer_sequence<int, At...>) {
   (f(row[At], At - packed_size(row[At]), At), ...);
 }
 
-// f(0) .. f(n - 1), and f(i, j, packed_at(i, j)) for j <= i < n. Written out, with no loop,
-// when the compiler is told n (N > 0): at -O2 that halves the time of a push.
+// f(0) .. f(n - 1), and f(i, j, packed_at(i, j)) for j <= i < n. Written out, with no
+// loop, when the compiler is told n (N > 0): at -O2 that halves the time of a push.
 template <int N, typename F>
 void for_each_below(int n, const F& f) {
   if constexpr (N > 0) {
@@ -111,11 +112,12 @@ class Aggregates {
     for_triangle<kVariables>(n, [&](int i, int j, int at) LAMBDABAR_INLINE {
       S_to[at] = S[at] + (factor * z[i]) * z[j];
     });
-    for_each_below<kVariables>(n, [&](int i) LAMBDABAR_INLINE { m_to[i] = m[i] + share * z[i]; });
+    for_each_below<kVariables>(
+        n, [&](int i) LAMBDABAR_INLINE { m_to[i] = m[i] + share * z[i]; });
   }
 
-  // The merged mean and products go to mean(i, value) and product(position, value), with the
-  // anchor of a. shift: anchor of b less anchor of a; used up.
+  // The merged mean and products go to mean(i, value) and product(position, value), with
+  // the anchor of a. shift: anchor of b less anchor of a; used up.
   template <typename MeanTo, typename ProductTo>
   void merge(const double* a,
              const double* b,

@@ -4,21 +4,22 @@
 //   full       all rows up to the slot        rolling    the last `length` calendar slots
 //   expanding  the same, updated               decay      weights 2^-(age / half_life)
 //
-// Slots are calendar positions, so a gap shortens a rolling sample and ages a decaying one.
-// A row counts when the return is finite, its weight is positive and every factor (at every
-// lead and lag) is known. Rows with leads are complete only after the last lead, so a window
-// ending at t holds rows lags .. leads slots inside it, and nothing from after t.
+// Slots are calendar positions, so a gap shortens a rolling sample and ages a decaying
+// one. A row counts when the return is finite, its weight is positive and every factor
+// (at every lead and lag) is known. Rows with leads are complete only after the last
+// lead, so a window ending at t holds rows lags .. leads slots inside it, and nothing
+// from after t.
 //
 // Classical errors s2 = rss / (n - K - 1) and s2 S^-1; decaying weights as in
 // window_fit.hpp. An asset's result never depends on its later rows, not even in the last
 // bit, and is the same on any number of threads and for any order of rows.
 //
 // Cost: three merges a slot whatever the window's length. Rolling windows use blocks of
-// `length` slots: aggregates from the left and from the right inside each, any window is the
-// tail of one merged with the head of the next. Nothing is ever subtracted. A window whose
-// cross-products are close to singular, or whose fit is close to exact, is solved from its
-// rows; all others are solved side by side (window_solve.hpp). Memory: O(length K^2) a
-// thread, and 4 bytes a row when rows are not by asset.
+// `length` slots: aggregates from the left and from the right inside each, any window is
+// the tail of one merged with the head of the next. Nothing is ever subtracted. A window
+// whose cross-products are close to singular, or whose fit is close to exact, is solved
+// from its rows; all others are solved side by side (window_solve.hpp). Memory: O(length
+// K^2) a thread, and 4 bytes a row when rows are not by asset.
 #pragma once
 
 #include "../panel/asset_rows.hpp"
@@ -52,15 +53,15 @@ struct ExposureData {
   const int* asset = nullptr;   // n, 0 .. n_assets - 1
   const int* period = nullptr;  // n, 0 .. n_periods - 1
   Index n_rows = 0, n_assets = 0;
-  std::vector<int> slot;        // n_periods, calendar position of a period, increasing
+  std::vector<int> slot;  // n_periods, calendar position of a period, increasing
   Eigen::Ref<const Matrix> factors;  // slots x K, NaN where unknown
 };
 
 // What is asked: m pairs of an asset and a time, by small codes. Several times may end at
 // one slot (a full window has one end for all of them).
 struct ExposureQueries {
-  const int* asset = nullptr;   // m, 0 .. data_asset.size() - 1
-  const int* time = nullptr;    // m, 0 .. last_slot.size() - 1; a pair occurs once
+  const int* asset = nullptr;  // m, 0 .. data_asset.size() - 1
+  const int* time = nullptr;   // m, 0 .. last_slot.size() - 1; a pair occurs once
   Index n = 0;
   std::vector<int> data_asset;  // the asset in the data, -1: not there
   std::vector<int> last_slot;   // never falling; before the first slot: an empty window
@@ -88,20 +89,22 @@ struct AssetSeries {
 
 struct WindowPlan {
   ExposureOptions options;
-  Index n_factors = 0;  // K of the question, without leads and lags
+  Index n_factors = 0;              // K of the question, without leads and lags
   std::vector<double> factor_rows;  // slots x regressors, by rows
   std::vector<char> known;          // slots: every regressor is there
   int n_slots = 0, n_regressors = 0;
   int min_obs = 0, length = 0, leads = 0;
-  double decay = 1.0;  // a slot
+  double decay = 1.0;    // a slot
   Matrix shift_weights;  // slots x (shifts K), fowler_rorke only
 
   const double* factors_at(int slot) const {
-    return factor_rows.data() + static_cast<std::size_t>(slot) * static_cast<std::size_t>(n_regressors);
+    return factor_rows.data() +
+           static_cast<std::size_t>(slot) * static_cast<std::size_t>(n_regressors);
   }
 };
 
-inline void fill_shift_weights(const Eigen::Ref<const Matrix>& factors, WindowPlan& plan) {
+inline void fill_shift_weights(const Eigen::Ref<const Matrix>& factors,
+                               WindowPlan& plan) {
   const LeadLag& shape = plan.options.lead_lag;
   const Index T = factors.rows(), K = factors.cols(), L = shape.lags;
   plan.shift_weights = Matrix::Constant(T, shape.n_shifts() * K, kNaN);
@@ -112,7 +115,8 @@ inline void fill_shift_weights(const Eigen::Ref<const Matrix>& factors, WindowPl
                               ? std::max<Index>(0, t - plan.options.length + 1)
                               : 0;
       const Vector c = fowler_rorke_weights(autocorrelations(x.data(), begin, t, L));
-      for (Index j = 0; j < shape.n_shifts(); ++j) plan.shift_weights(t, j * K + k) = c(j);
+      for (Index j = 0; j < shape.n_shifts(); ++j)
+        plan.shift_weights(t, j * K + k) = c(j);
     }
   }
 }
@@ -133,12 +137,14 @@ inline WindowPlan plan_windows(const ExposureData& data, const ExposureOptions& 
                 {{"length", static_cast<double>(options.length)},
                  {"usable", static_cast<double>(plan.length)},
                  {"min_obs", static_cast<double>(plan.min_obs)}});
-  if (options.window == WindowKind::decay) plan.decay = std::exp2(-1.0 / options.half_life);
+  if (options.window == WindowKind::decay)
+    plan.decay = std::exp2(-1.0 / options.half_life);
   if (shape.form == LeadLagForm::fowler_rorke) {
     if (shape.leads != shape.lags || options.window == WindowKind::decay)
-      throw Error("unsupported",
-                  "Weights of leads and lags from autocorrelations need as many leads as lags "
-                  "and a window without decay.");
+      throw Error(
+          "unsupported",
+          "Weights of leads and lags from autocorrelations need as many leads as lags "
+          "and a window without decay.");
     fill_shift_weights(data.factors, plan);
   }
   const Matrix regressors = shifted_factors(data.factors, shape);
@@ -184,7 +190,8 @@ class WindowWalk {
     const WindowKind kind = plan.options.window;
     in_lanes_ = (kind == WindowKind::rolling || kind == WindowKind::expanding) &&
                 plan.n_factors == plan.n_regressors;
-    std::fill_n(lane_products_.data(), packed_size(shape_.n_variables()), WindowLanes(0.0));
+    std::fill_n(
+        lane_products_.data(), packed_size(shape_.n_variables()), WindowLanes(0.0));
     std::fill_n(lane_means_.data(), shape_.n_variables(), WindowLanes(0.0));
     lane_n_.setZero();
   }
@@ -242,9 +249,15 @@ class WindowWalk {
 
   void advance(int end) {
     switch (plan_.options.window) {
-      case WindowKind::rolling: advance_rolling(end); break;
-      case WindowKind::expanding: advance_expanding(end); break;
-      case WindowKind::decay: advance_decay(end); break;
+      case WindowKind::rolling:
+        advance_rolling(end);
+        break;
+      case WindowKind::expanding:
+        advance_expanding(end);
+        break;
+      case WindowKind::decay:
+        advance_decay(end);
+        break;
       case WindowKind::full:
         while (next_ < series().size() && series().slot[next_] <= end) ++next_;
         break;
@@ -262,8 +275,8 @@ class WindowWalk {
       push_head(series().weight[next_]);
   }
 
-  // head_ has weights a d, squares_ a d^2, wanted_ is the sum of d; all of them as seen from
-  // the last row, since a common factor cancels.
+  // head_ has weights a d, squares_ a d^2, wanted_ is the sum of d; all of them as seen
+  // from the last row, since a common factor cancels.
   void advance_decay(int end) {
     for (; next_ < series().size() && series().slot[next_] <= end; ++next_) {
       if (next_ > 0) {
@@ -283,7 +296,8 @@ class WindowWalk {
   }
 
   void move_anchor() {
-    std::copy(head_anchor_.data(), head_anchor_.data() + shape_.n_variables(), shift_.data());
+    std::copy(
+        head_anchor_.data(), head_anchor_.data() + shape_.n_variables(), shift_.data());
     set_anchor(next_, head_anchor_.data());
     for (int i = 0; i < shape_.n_variables(); ++i) {
       const double moved = head_anchor_.data()[i] - shift_.data()[i];
@@ -339,23 +353,29 @@ class WindowWalk {
     if (!solved) solve_rows(first_, next_);
   }
 
-  // Means and products of the rows in the window, to mean(i, value), product(position, value).
+  // Means and products of the rows in the window, to mean(i, value), product(position,
+  // value).
   template <typename MeanTo, typename ProductTo>
   void gather(const MeanTo& mean, const ProductTo& product) {
-    const bool has_tail = plan_.options.window == WindowKind::rolling && first_ < tail_end_;
+    const bool has_tail =
+        plan_.options.window == WindowKind::rolling && first_ < tail_end_;
     const bool has_head = !has_tail || next_ > tail_end_;
     if (has_tail && has_head) {
       const double* anchor = tail_anchor_.data();
       for (int i = 0; i < shape_.n_variables(); ++i)
         shift_.data()[i] = head_anchor_.data()[i] - anchor[i];
       shape_.merge(
-          tail_at(first_), head_.data(), shift_.data(),
-          [&](int i, double value) LAMBDABAR_INLINE { mean(i, value + anchor[i]); }, product);
+          tail_at(first_),
+          head_.data(),
+          shift_.data(),
+          [&](int i, double value) LAMBDABAR_INLINE { mean(i, value + anchor[i]); },
+          product);
       return;
     }
     const double* from = has_head ? head_.data() : tail_at(first_);
     const double* anchor = has_head ? head_anchor_.data() : tail_anchor_.data();
-    for (int i = 0; i < shape_.n_variables(); ++i) mean(i, shape_.mean(from)[i] + anchor[i]);
+    for (int i = 0; i < shape_.n_variables(); ++i)
+      mean(i, shape_.mean(from)[i] + anchor[i]);
     for (int i = 0; i < packed_size(shape_.n_variables()); ++i)
       product(i, shape_.products(from)[i]);
   }
@@ -367,7 +387,8 @@ class WindowWalk {
     if (!solver_.trusted()) return false;
     const int K = shape_.n_factors();
     estimate_.status = WindowStatus::estimated;
-    for (int k = 0; k < K; ++k) estimate_.beta[static_cast<std::size_t>(k)] = solver_.beta(k);
+    for (int k = 0; k < K; ++k)
+      estimate_.beta[static_cast<std::size_t>(k)] = solver_.beta(k);
     estimate_.alpha = solver_.alpha();
     estimate_.r_squared = solver_.r_squared();
     if (plan_.options.window == WindowKind::decay) {
@@ -390,9 +411,10 @@ class WindowWalk {
       return;
     }
     const int lane = staged_++;
-    gather(
-        [&](int i, double value) LAMBDABAR_INLINE { lane_means_.data()[i](lane) = value; },
-        [&](int at, double value) LAMBDABAR_INLINE { lane_products_.data()[at](lane) = value; });
+    gather([&](int i, double value)
+               LAMBDABAR_INLINE { lane_means_.data()[i](lane) = value; },
+           [&](int at, double value)
+               LAMBDABAR_INLINE { lane_products_.data()[at](lane) = value; });
     lane_n_(lane) = static_cast<double>(estimate_.n_rows);
     waiting_[static_cast<std::size_t>(lane)] = {row, first_, next_};
     if (staged_ == kWindowLanes) solve_staged();
@@ -418,7 +440,8 @@ class WindowWalk {
       const Waiting& window = waiting_[static_cast<std::size_t>(lane)];
       const auto n = static_cast<int>(window.next - window.first);
       if (out_.n_obs) out_.n_obs[window.row] = n;
-      if (out_.status) out_.status[window.row] = static_cast<int>(WindowStatus::estimated);
+      if (out_.status)
+        out_.status[window.row] = static_cast<int>(WindowStatus::estimated);
       if (lane_solver_.trusted()(lane)) continue;
       estimate_.n_rows = n;
       solve_rows(window.first, window.next);
@@ -489,7 +512,8 @@ class WindowWalk {
       estimate_.status = WindowStatus::undefined_weights;
       return;
     }
-    const Vector beta = c.transpose() * Eigen::Map<const Vector>(estimate_.beta.data(), all);
+    const Vector beta =
+        c.transpose() * Eigen::Map<const Vector>(estimate_.beta.data(), all);
     const Matrix summed = c.transpose() * V * c;
     at = 0;
     for (int j = 0; j < K; ++j) {
@@ -504,7 +528,8 @@ class WindowWalk {
     const double *b = estimate_.beta.data(), *V = estimate_.covariance.data();
     for (int k = 0; k < K; ++k) {
       if (out_.beta) out_.beta[k * n_out_ + row] = fine ? b[k] : out_.missing;
-      if (out_.std_error) out_.std_error[k * n_out_ + row] = fine ? std::sqrt(*V) : out_.missing;
+      if (out_.std_error)
+        out_.std_error[k * n_out_ + row] = fine ? std::sqrt(*V) : out_.missing;
       V += K - k;
     }
     V = estimate_.covariance.data();
@@ -595,7 +620,8 @@ void walk_assets(const ExposureData& data,
       walk.start(series);
       for (Index i = asked.begin(asset); i < asked.end(asset); ++i) {
         const Index query = asked.row(i);
-        walk.answer(queries.last_slot[static_cast<std::size_t>(queries.time[query])], query);
+        walk.answer(queries.last_slot[static_cast<std::size_t>(queries.time[query])],
+                    query);
       }
       walk.finish();
     }
@@ -635,12 +661,18 @@ inline void exposures(const ExposureData& data,
                    static_cast<Index>(queries.last_slot.size()));
   const AssetRows& asked = own ? rows : *others;
   switch (plan.n_regressors) {
-    case 1: return detail::walk_assets<1>(data, plan, rows, asked, queries, out);
-    case 2: return detail::walk_assets<2>(data, plan, rows, asked, queries, out);
-    case 3: return detail::walk_assets<3>(data, plan, rows, asked, queries, out);
-    case 4: return detail::walk_assets<4>(data, plan, rows, asked, queries, out);
-    case 5: return detail::walk_assets<5>(data, plan, rows, asked, queries, out);
-    default: return detail::walk_assets<0>(data, plan, rows, asked, queries, out);
+    case 1:
+      return detail::walk_assets<1>(data, plan, rows, asked, queries, out);
+    case 2:
+      return detail::walk_assets<2>(data, plan, rows, asked, queries, out);
+    case 3:
+      return detail::walk_assets<3>(data, plan, rows, asked, queries, out);
+    case 4:
+      return detail::walk_assets<4>(data, plan, rows, asked, queries, out);
+    case 5:
+      return detail::walk_assets<5>(data, plan, rows, asked, queries, out);
+    default:
+      return detail::walk_assets<0>(data, plan, rows, asked, queries, out);
   }
 }
 

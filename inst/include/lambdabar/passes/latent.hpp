@@ -1,13 +1,13 @@
-// Premia of observed factors when factors are missing from the model: three passes (Giglio and
-// Xiu 2021, Journal of Political Economy 129, 1947-1990). Complete panel of N assets and T
-// periods; G: T x d observed factors.
+// Premia of observed factors when factors are missing from the model: three passes
+// (Giglio and Xiu 2021, Journal of Political Economy 129, 1947-1990). Complete panel of N
+// assets and T periods; G: T x d observed factors.
 //   1  R~ = U D W' (less means), V = sqrt(T) U_p, so V'V/T = I; beta = R~'V/T
 //   2  gamma = (X'X)^-1 X' mean R, X = beta or [1, beta]
 //   3  eta = G~'V/T; premium of g = eta gamma_v
-// Rows (z_t (v_t'gamma) + eta v_t) / T, z_t = g_t - eta v_t. Neither signs nor a rotation of V
-// matter. Strength: eta'S^-1 eta against chi2(p), S the sum of rows v_t z_t / T: the robust Wald
-// test of the regression of g on V. Cost: one eigen-decomposition of the smaller of R~'R~ and
-// R~R~', O(N T min(N, T)).
+// Rows (z_t (v_t'gamma) + eta v_t) / T, z_t = g_t - eta v_t. Neither signs nor a rotation
+// of V matter. Strength: eta'S^-1 eta against chi2(p), S the sum of rows v_t z_t / T: the
+// robust Wald test of the regression of g on V. Cost: one eigen-decomposition of the
+// smaller of R~'R~ and R~R~', O(N T min(N, T)).
 //
 // Number of factors, from the eigenvalues e_j of R~'R~ / (N T), up to p_max:
 //   penalised     argmin_j e_j + j pen, less one; pen = median(e_1 .. e_pmax) / 2
@@ -34,12 +34,12 @@ struct LatentBasis {
 };
 
 struct LatentFit {
-  Vector premium;           // d
-  Matrix rows;              // T x d, summing
-  Vector gamma;             // premia of the constant, if any, and of the p components
-  Vector strength;          // d, Wald statistics against chi2(p); NaN: singular
-  Vector r_squared;         // d, of g on the components
-  double mean_r2 = 0;       // share of the returns' variance that p components have
+  Vector premium;      // d
+  Matrix rows;         // T x d, summing
+  Vector gamma;        // premia of the constant, if any, and of the p components
+  Vector strength;     // d, Wald statistics against chi2(p); NaN: singular
+  Vector r_squared;    // d, of g on the components
+  double mean_r2 = 0;  // share of the returns' variance that p components have
 };
 
 inline LatentBasis latent_basis(const Eigen::Ref<const Matrix>& returns, Index most) {
@@ -55,7 +55,8 @@ inline LatentBasis latent_basis(const Eigen::Ref<const Matrix>& returns, Index m
     throw Error("input", "The eigenvalues of the returns did not converge.");
   out.eigenvalues = eigen.eigenvalues().reverse().cwiseMax(0.0) / size;
   Index rank = 0;
-  while (rank < out.eigenvalues.size() && out.eigenvalues(rank) > 1e-13 * out.eigenvalues(0))
+  while (rank < out.eigenvalues.size() &&
+         out.eigenvalues(rank) > 1e-13 * out.eigenvalues(0))
     ++rank;
   most = std::min(most, rank);
   const Matrix leading = eigen.eigenvectors().rightCols(most).rowwise().reverse();
@@ -71,7 +72,8 @@ inline LatentBasis latent_basis(const Eigen::Ref<const Matrix>& returns, Index m
   return out;
 }
 
-inline Index count_factors(const Vector& e, Index N, Index T, Index most, CountRule rule) {
+inline Index count_factors(
+    const Vector& e, Index N, Index T, Index most, CountRule rule) {
   const double n = static_cast<double>(N), t = static_cast<double>(T);
   most = std::min<Index>(most, e.size() - 2);
   auto rest = [&](Index j) { return e.tail(e.size() - j).sum(); };
@@ -81,9 +83,10 @@ inline Index count_factors(const Vector& e, Index N, Index T, Index most, CountR
     std::vector<double> sorted(e.data(), e.data() + most);
     std::sort(sorted.begin(), sorted.end());
     const auto half = static_cast<std::size_t>(most / 2);
-    const double median = most % 2 ? sorted[half] : 0.5 * (sorted[half - 1] + sorted[half]);
-    const double penalty =
-        0.5 * median * (std::log(n) + std::log(t)) * (1.0 / std::sqrt(n) + 1.0 / std::sqrt(t));
+    const double median =
+        most % 2 ? sorted[half] : 0.5 * (sorted[half - 1] + sorted[half]);
+    const double penalty = 0.5 * median * (std::log(n) + std::log(t)) *
+                           (1.0 / std::sqrt(n) + 1.0 / std::sqrt(t));
     for (Index j = 1; j <= most; ++j) {
       const double objective = e(j - 1) + static_cast<double>(j) * penalty;
       if (j == 1 || objective < value) value = objective, best = j;
@@ -99,9 +102,10 @@ inline Index count_factors(const Vector& e, Index N, Index T, Index most, CountR
     return best;
   }
   for (Index j = 1; j <= most; ++j) {
-    const double ratio = rule == CountRule::eigen_ratio
-                             ? e(j - 1) / e(j)
-                             : std::log(rest(j - 1) / rest(j)) / std::log(rest(j) / rest(j + 1));
+    const double ratio =
+        rule == CountRule::eigen_ratio
+            ? e(j - 1) / e(j)
+            : std::log(rest(j - 1) / rest(j)) / std::log(rest(j) / rest(j + 1));
     if (j == 1 || ratio > value) value = ratio, best = j;
   }
   return best;
@@ -122,7 +126,8 @@ inline LatentFit latent_fit(const LatentBasis& basis,
   X.rightCols(p) = basis.beta.leftCols(p);
   const detail::Projection projection = detail::project(X, intercept);
   if (!projection.usable())
-    throw Error("rank", "The loadings on the components are collinear with the constant.");
+    throw Error("rank",
+                "The loadings on the components are collinear with the constant.");
   LatentFit out;
   out.gamma = projection.C * (projection.Q.transpose() * basis.mean_return);
   const Vector gamma = out.gamma.tail(p);
@@ -136,7 +141,8 @@ inline LatentFit latent_fit(const LatentBasis& basis,
   out.r_squared.resize(d);
   for (Index k = 0; k < d; ++k) {
     const Matrix rows = rest.col(k).asDiagonal() * V / n;
-    const Matrix S = detail::sum_series_by(rows, slot, Matrix(), Vector::Ones(p), series).S;
+    const Matrix S =
+        detail::sum_series_by(rows, slot, Matrix(), Vector::Ones(p), series).S;
     out.strength(k) = detail::quadratic_form(eta.row(k).transpose(), S).value;
     out.r_squared(k) = explained.col(k).squaredNorm() / G.col(k).squaredNorm();
   }

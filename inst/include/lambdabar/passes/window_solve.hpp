@@ -1,12 +1,12 @@
 // The normal equations of a window from the centred cross-products S of (f_1 .. f_K, y):
 //   S_ff = L L',  u = L^-1 S_fy,  b = L'^-1 u,  rss = S_yy - u'u,  S_ff^-1 = L'^-1 L^-1
-// Real is a double, or WindowLanes: as many windows as there are lanes, one in each. A window
-// waits for its own square roots and divisions; side by side they do not wait for each other.
-// Each lane does what a double alone would do, to the bit.
+// Real is a double, or WindowLanes: as many windows as there are lanes, one in each. A
+// window waits for its own square roots and divisions; side by side they do not wait for
+// each other. Each lane does what a double alone would do, to the bit.
 //
 // No row is looked at: where `trusted` is false, a pivot or the residual sum is so small
-// against what it came from that its digits are gone, and the window needs window_fit.hpp.
-// Cost O(K^3) a window.
+// against what it came from that its digits are gone, and the window needs
+// window_fit.hpp. Cost O(K^3) a window.
 #pragma once
 
 #include "aggregates.hpp"

@@ -1,21 +1,22 @@
-// The stochastic discount factor of a linear factor model at the smallest Hansen-Jagannathan
-// distance (Hansen and Jagannathan 1997, Journal of Finance 52, 557-590):
+// The stochastic discount factor of a linear factor model at the smallest
+// Hansen-Jagannathan distance (Hansen and Jagannathan 1997, Journal of Finance 52,
+// 557-590):
 //   excess returns  m_t = 1 - b'(f_t - mean f):  C = Cov(R, f), U = Var(R), target mean R
 //                   (Kan and Robotti 2008, Journal of Empirical Finance 15, 816-838)
-//   gross returns   m_t = b'(1, f_t):            C = mean R (1, f'), U = mean R R', target 1
-//   b = (C'U^-1 C)^-1 C'U^-1 target,  e = target - C b,  delta^2 = e'U^-1 e
-// Rows of b (Gospodinov, Kan and Robotti 2014, Review of Financial Studies 27, 2139-2170), with
-// H = (C'U^-1 C)^-1, p_t = C'U^-1 R_t, u_t = e'U^-1 R_t, x_t = f_t or (1, f_t); R and x less
-// their means for excess returns:
+//   gross returns   m_t = b'(1, f_t):            C = mean R (1, f'), U = mean R R',
+//   target 1 b = (C'U^-1 C)^-1 C'U^-1 target,  e = target - C b,  delta^2 = e'U^-1 e
+// Rows of b (Gospodinov, Kan and Robotti 2014, Review of Financial Studies 27,
+// 2139-2170), with H = (C'U^-1 C)^-1, p_t = C'U^-1 R_t, u_t = e'U^-1 R_t, x_t = f_t or
+// (1, f_t); R and x less their means for excess returns:
 //   excess H (p_t (1 - x_t'b) - mean + (x_t - p_t) u_t) / T
 //   gross  H (-p_t x_t'b - mean + (x_t - p_t) u_t) / T
-// The term in u_t is what a wrong model adds. Rows of delta^2 (Hansen, Heaton and Luttmer 1995,
-// Review of Financial Studies 8, 237-274), for delta > 0:
+// The term in u_t is what a wrong model adds. Rows of delta^2 (Hansen, Heaton and Luttmer
+// 1995, Review of Financial Studies 8, 237-274), for delta > 0:
 //   excess (2 u_t (1 - x_t'b) - u_t^2 + delta^2) / T
 //   gross  (-2 (u_t x_t'b - mean) - u_t^2 + delta^2) / T
-// T delta^2 under delta = 0: sum xi_i chi2_1 (Jagannathan and Wang 1996, Journal of Finance 51,
-// 3-53), xi: eigenvalues of P'U^-1/2 S U^-1/2 P, P orthonormal with P'U^-1/2 C = 0, S the
-// long-run covariance of R_t m_t less its mean. Cost O(T N^2 + N^3); T > N.
+// T delta^2 under delta = 0: sum xi_i chi2_1 (Jagannathan and Wang 1996, Journal of
+// Finance 51, 3-53), xi: eigenvalues of P'U^-1/2 S U^-1/2 P, P orthonormal with P'U^-1/2
+// C = 0, S the long-run covariance of R_t m_t less its mean. Cost O(T N^2 + N^3); T > N.
 #pragma once
 
 #include "pricing_r2.hpp"
@@ -27,7 +28,8 @@ struct DiscountFactor {
   Matrix rows, usual_rows;  // T x size of b, summing: any model; only a right one
   double distance2 = kNaN;
   Vector distance_rows;  // T, of delta^2
-  WeightedForm right;    // of delta = 0; empty when there are as many assets as coefficients
+  WeightedForm
+      right;  // of delta = 0; empty when there are as many assets as coefficients
 };
 
 inline DiscountFactor discount_factor(const Eigen::Ref<const Matrix>& returns,
@@ -87,15 +89,15 @@ inline DiscountFactor discount_factor(const Eigen::Ref<const Matrix>& returns,
   out.rows = (rows + u.asDiagonal() * (X - p)) * H / n;
   Vector first = weight.cwiseProduct(u);
   first.array() -= first.mean();
-  out.distance_rows =
-      (2.0 * first.array() - u.array().square() + out.distance2) / n;
+  out.distance_rows = (2.0 * first.array() - u.array().square() + out.distance2) / n;
 
   if (N > X.cols()) {
     const Matrix complement = detail::complement(FC);
     Matrix tested = weight.asDiagonal() * (FR.transpose() * complement);
     tested.rowwise() -= tested.colwise().mean().eval();
     tested /= n;
-    const Vector spread = detail::usable_scale((tested * complement.transpose()).colwise().norm());
+    const Vector spread =
+        detail::usable_scale((tested * complement.transpose()).colwise().norm());
     const Matrix rule_map = complement.transpose() * spread.cwiseInverse().asDiagonal();
     const Matrix S =
         detail::sum_series_by(tested, slot, rule_map, Vector::Ones(N), series).S;

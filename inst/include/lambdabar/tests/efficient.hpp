@@ -1,5 +1,5 @@
-// Efficient moments (Hansen 1982, Econometrica 50, 1029-1054) of a linear factor model on a
-// complete panel: with eps_t = R_t - 1 gamma_0 - B (gamma_f + f_t - mu),
+// Efficient moments (Hansen 1982, Econometrica 50, 1029-1054) of a linear factor model on
+// a complete panel: with eps_t = R_t - 1 gamma_0 - B (gamma_f + f_t - mu),
 //   g_t = (eps_t, f_t (x) eps_t, f_t - mu),  theta = (gamma_0, gamma_f, vec B, mu)
 // N (K + 1) + K moments, N - P of them over-identifying (P premia, gamma_0 only with an
 // intercept). S: long-run covariance of g_t at the two-pass OLS estimates, held;
@@ -41,7 +41,8 @@ class MomentModel {
 
   Vector start(const TwoPass& fit) const {
     Vector theta(n_parameters());
-    theta << fit.premia, Eigen::Map<const Vector>(fit.first.beta.data(), N_ * K_), mean_factor_;
+    theta << fit.premia, Eigen::Map<const Vector>(fit.first.beta.data(), N_ * K_),
+        mean_factor_;
     return theta;
   }
 
@@ -136,8 +137,7 @@ inline EfficientMoments efficient_moments(const TwoPassData& data,
     theta -= change;
     converged = change.norm() <= 1e-12 * theta.norm();
   }
-  if (!converged)
-    throw Error("input", "The efficient moments did not converge.", {});
+  if (!converged) throw Error("input", "The efficient moments did not converge.", {});
   W = whiten(model.jacobian(theta));
   out.premia = theta.head(P);
   out.covariance = (W.transpose() * W).inverse().topLeftCorner(P, P);

@@ -1,6 +1,7 @@
-// The mean-variance frontier of n returns over T periods (Merton 1972, Journal of Financial and
-// Quantitative Analysis 7, 1851-1872): variance of the best portfolio of mean m, weights adding
-// up to one, is  least + curvature (m - m0)^2. With A = 1'V^-1 1, B = 1'V^-1 mu, C = mu'V^-1 mu,
+// The mean-variance frontier of n returns over T periods (Merton 1972, Journal of
+// Financial and Quantitative Analysis 7, 1851-1872): variance of the best portfolio of
+// mean m, weights adding up to one, is  least + curvature (m - m0)^2. With A = 1'V^-1 1,
+// B = 1'V^-1 mu, C = mu'V^-1 mu,
 //   least = 1 / A at m0 = B / A, weights V^-1 1 / A;  curvature = A / (A C - B^2)
 //   highest Sharpe ratio sqrt(C), weights V^-1 mu / B. From a QR: V is not formed.
 #pragma once
@@ -15,7 +16,8 @@ struct Frontier {
 };
 
 // divisor: of the covariance, T or T - 1.
-inline Frontier mean_variance_frontier(const Eigen::Ref<const Matrix>& returns, double divisor) {
+inline Frontier mean_variance_frontier(const Eigen::Ref<const Matrix>& returns,
+                                       double divisor) {
   const Vector mean = returns.colwise().mean();
   const detail::Triangle triangle =
       detail::upper_triangle(returns.rowwise() - mean.transpose());

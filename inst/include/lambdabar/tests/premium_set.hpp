@@ -1,19 +1,21 @@
-// Sets of premia that are not rejected, whatever the strength of the betas (Kleibergen 2009,
-// Journal of Econometrics 149, 149-173). See loadings.hpp for contrasts, Q, Sigma, n.
+// Sets of premia that are not rejected, whatever the strength of the betas (Kleibergen
+// 2009, Journal of Econometrics 149, 149-173). See loadings.hpp for contrasts, Q, Sigma,
+// n.
 //   x(l) = a'Sigma^-1 a / (1 + l'Q^-1 l),  a = mean R - B l
-// is, times (T - K - n) / n, the F test that the intercepts on f - mean f + l are zero: exact
-// given the factors if errors are normal and independent. l is in the set iff x(l) <= x_c, that
-// is (1, -l) H (1, -l)' <= 0 with
+// is, times (T - K - n) / n, the F test that the intercepts on f - mean f + l are zero:
+// exact given the factors if errors are normal and independent. l is in the set iff x(l)
+// <= x_c, that is (1, -l) H (1, -l)' <= 0 with
 //   H = Y'Sigma^-1 Y - x_c diag(1, Q^-1),  Y = [mean R, B]
-// All premia: bounded iff the block of B is positive definite; empty iff the smallest root of
-// |Y'Sigma^-1 Y - x diag(1, Q^-1)|, the over-identification statistic, is above x_c.
-// One premium, l_j: when the block of the others is not positive definite the set is the whole
-// line; otherwise they are projected out and h22 l^2 - 2 h12 l + h11 <= 0 decides.
+// All premia: bounded iff the block of B is positive definite; empty iff the smallest
+// root of |Y'Sigma^-1 Y - x diag(1, Q^-1)|, the over-identification statistic, is above
+// x_c. One premium, l_j: when the block of the others is not positive definite the set is
+// the whole line; otherwise they are projected out and h22 l^2 - 2 h12 l + h11 <= 0
+// decides.
 //
 // One factor also with rows that need no homoskedasticity: T a'S(l)^-1 a, S the long-run
-// covariance of (R_t - mean R) - e_t (f_t'Q^-1 l), or e_t (1 - f_t'Q^-1 l) for the premium that
-// the factor earned in the sample. l = s tan(angle) makes infinity a point like others; the
-// circle is scanned and its sign changes bisected.
+// covariance of (R_t - mean R) - e_t (f_t'Q^-1 l), or e_t (1 - f_t'Q^-1 l) for the
+// premium that the factor earned in the sample. l = s tan(angle) makes infinity a point
+// like others; the circle is scanned and its sign changes bisected.
 #pragma once
 
 #include "loadings.hpp"
@@ -63,9 +65,9 @@ inline SetForms set_forms(const Loadings& x) {
   const Matrix W = x.whiten(Y);
   out.YY = W.transpose() * W;
   // Q = Uf'Uf / T, so Q^-1 = T Uf^-1 Uf'^-1.
-  const Matrix inverse = out.unit.asDiagonal() *
-                         x.Uf.triangularView<Eigen::Upper>().solve(
-                             std::sqrt(x.periods()) * Matrix::Identity(x.K, x.K));
+  const Matrix inverse =
+      out.unit.asDiagonal() * x.Uf.triangularView<Eigen::Upper>().solve(
+                                  std::sqrt(x.periods()) * Matrix::Identity(x.K, x.K));
   out.one_Q = Matrix::Zero(x.K + 1, x.K + 1);
   out.one_Q(0, 0) = 1.0;
   out.one_Q.bottomRightCorner(x.K, x.K) = inverse * inverse.transpose();
@@ -87,7 +89,8 @@ inline PremiumSet one_premium(const SetForms& forms, Index j, double critical) {
       const Index ka = others[static_cast<std::size_t>(a)];
       side(a, 0) = H(ka, 0);
       side(a, 1) = H(ka, j + 1);
-      for (Index b = 0; b < m; ++b) block(a, b) = H(ka, others[static_cast<std::size_t>(b)]);
+      for (Index b = 0; b < m; ++b)
+        block(a, b) = H(ka, others[static_cast<std::size_t>(b)]);
     }
     const Eigen::LLT<Matrix> cholesky(block);
     if (cholesky.info() != Eigen::Success)
@@ -223,7 +226,8 @@ inline PremiumSet premium_set_by_scan(const Eigen::Ref<const Matrix>& returns,
   double begin = -detail::kInfinity;
   auto value = [&](double at) { return statistic.unit() * std::tan(at); };
   for (int i = 1; i <= kAngles; ++i) {
-    const bool before = in[static_cast<std::size_t>(i - 1)], now = in[static_cast<std::size_t>(i)];
+    const bool before = in[static_cast<std::size_t>(i - 1)],
+               now = in[static_cast<std::size_t>(i)];
     if (before == now) continue;
     if (now) {
       begin = value(detail::bisect(statistic, angle(i), angle(i - 1), critical));

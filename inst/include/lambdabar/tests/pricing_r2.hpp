@@ -1,18 +1,21 @@
-// The cross-sectional R2 of a two-pass estimate on a complete panel (Kan, Robotti and Shanken
-// 2013, Journal of Finance 68, 2617-2649). W = I or V^-1, the weights of the second pass,
-// e0 = mean R less its W-mean (less nothing without an intercept), a = pricing errors:
+// The cross-sectional R2 of a two-pass estimate on a complete panel (Kan, Robotti and
+// Shanken 2013, Journal of Finance 68, 2617-2649). W = I or V^-1, the weights of the
+// second pass, e0 = mean R less its W-mean (less nothing without an intercept), a =
+// pricing errors:
 //   Q = a'W a,  Q0 = e0'W e0,  R2 = 1 - Q / Q0 = gamma_f' C gamma_f / Q0
 //   rows   u = a'W r_t, v = e0'W r_t, y = 1 - w_t;  OLS (2 (1 - R2) v - 2 u y) / (Q0 T),
 //          GLS (u^2 - 2 u y + (1 - R2)(2 v - v^2)) / (Q0 T); valid for 0 < R2 < 1
-//   R2 = 1: T Q against sum xi_i chi2_1, xi: eigenvalues of P'F S F'P, F'F = W, P orthonormal
+//   R2 = 1: T Q against sum xi_i chi2_1, xi: eigenvalues of P'F S F'P, F'F = W, P
+//   orthonormal
 //           with P'F X = 0, S the long-run covariance of e_t (1 - w_t)
-//   R2 = 0: T gamma_f'C gamma_f against sum xi_i chi2_1, xi: eigenvalues of C^1/2 Vg C^1/2,
+//   R2 = 0: T gamma_f'C gamma_f against sum xi_i chi2_1, xi: eigenvalues of C^1/2 Vg
+//   C^1/2,
 //           Vg the long-run covariance of the misspecified rows of gamma_f at w_t = 0
 // All moments have divisor T. Cost O(T N^2 + N^3).
 //
-// Two models on the same assets: b = Vf^-1 gamma_f are the prices of covariance risk, rows
-// Vf^-1 (h_t - d_t (d_t'b) / T + gamma_f / T). Factors that only one model has add nothing to
-// its R2 exactly when their b is zero.
+// Two models on the same assets: b = Vf^-1 gamma_f are the prices of covariance risk,
+// rows Vf^-1 (h_t - d_t (d_t'b) / T + gamma_f / T). Factors that only one model has add
+// nothing to its R2 exactly when their b is zero.
 #pragma once
 
 #include "../passes/two_pass.hpp"
@@ -61,7 +64,9 @@ inline PricingR2 pricing_r2(const TwoPassData& data,
   const Matrix FX = whitening.apply(fit.X);
   const Vector F_one = whitening.apply(Matrix::Ones(N, 1));
   auto take_mean = [&](const Matrix& M) -> Matrix {
-    return fit.intercept ? Matrix(M - F_one * (F_one.transpose() * M) / F_one.squaredNorm()) : M;
+    return fit.intercept
+               ? Matrix(M - F_one * (F_one.transpose() * M) / F_one.squaredNorm())
+               : M;
   };
   const Vector Fe0 = take_mean(whitening.apply(fit.mean_return));
   const Vector Fa = whitening.apply(fit.alpha);
@@ -91,9 +96,10 @@ inline PricingR2 pricing_r2(const TwoPassData& data,
 
   const Vector gamma = fit.premia.segment(first, K);
   const Matrix C = FB.transpose() * FB;
-  const Matrix rows_zero =
-      (fit.rows_misspecified + fit.w.asDiagonal() * fit.loading_rows).middleCols(first, K);
-  const Matrix Vg = detail::sum_series_by(rows_zero, slot, Matrix(), Vector::Ones(K), series).S;
+  const Matrix rows_zero = (fit.rows_misspecified + fit.w.asDiagonal() * fit.loading_rows)
+                               .middleCols(first, K);
+  const Matrix Vg =
+      detail::sum_series_by(rows_zero, slot, Matrix(), Vector::Ones(K), series).S;
   const Eigen::HouseholderQR<Matrix> qr(FB);
   const Matrix R = qr.matrixQR().topRows(K).triangularView<Eigen::Upper>();
   out.zero.statistic = n * gamma.dot(C * gamma);
@@ -105,9 +111,11 @@ inline PricingR2 pricing_r2(const TwoPassData& data,
     const Matrix complement = detail::complement(FX);
     const Matrix rows = (y / n).asDiagonal() *
                         (whitening.apply(residuals.transpose()).transpose() * complement);
-    const Vector spread = detail::usable_scale((rows * complement.transpose()).colwise().norm());
+    const Vector spread =
+        detail::usable_scale((rows * complement.transpose()).colwise().norm());
     const Matrix rule_map = complement.transpose() * spread.cwiseInverse().asDiagonal();
-    const Matrix S = detail::sum_series_by(rows, slot, rule_map, Vector::Ones(N), series).S;
+    const Matrix S =
+        detail::sum_series_by(rows, slot, rule_map, Vector::Ones(N), series).S;
     out.one.statistic = n * out.Q;
     out.one.weights = detail::positive_eigenvalues(n * S);
   }

@@ -1,13 +1,16 @@
-// Squared Sharpe ratios of sets of traded factors, theta2 = mean f'V^-1 mean f, divisor T:
+// Squared Sharpe ratios of sets of traded factors, theta2 = mean f'V^-1 mean f, divisor
+// T:
 //   adjusted  theta2 (T - K - 2) / T - K / T, unbiased under normality
 //   rows      (2 u_t - u_t^2 + theta2) / T, u_t = mean f'V^-1 (f_t - mean f)
-// (Barillas and Shanken 2017, Review of Financial Studies 30, 1316-1338; Barillas, Kan, Robotti
-// and Shanken 2020, Journal of Financial and Quantitative Analysis 55, 1840-1874).
+// (Barillas and Shanken 2017, Review of Financial Studies 30, 1316-1338; Barillas, Kan,
+// Robotti and Shanken 2020, Journal of Financial and Quantitative Analysis 55,
+// 1840-1874).
 //
 // Is one model as good as each of J others? delta_j = theta2 less that of model j, V its
 // covariance: LR = min_{d >= 0} (delta - d)'V^-1 (delta - d) against
-// sum_{k >= 1} w_k P(chi2_k > LR), w_k the probability that the projection of N(0, V) on d >= 0
-// has k zeros, simulated from given draws. The projection goes through the 2^J faces.
+// sum_{k >= 1} w_k P(chi2_k > LR), w_k the probability that the projection of N(0, V) on
+// d >= 0 has k zeros, simulated from given draws. The projection goes through the 2^J
+// faces.
 #pragma once
 
 #include "../passes/projection.hpp"
@@ -21,7 +24,8 @@ struct SharpeRatio {
 };
 
 inline SharpeRatio squared_sharpe(const Eigen::Ref<const Matrix>& factors) {
-  const double n = static_cast<double>(factors.rows()), K = static_cast<double>(factors.cols());
+  const double n = static_cast<double>(factors.rows()),
+               K = static_cast<double>(factors.cols());
   const Vector mean = factors.colwise().mean();
   const Matrix D = factors.rowwise() - mean.transpose();
   const detail::Triangle triangle = detail::upper_triangle(D);
@@ -45,8 +49,8 @@ struct OrthantProjection {
   int zeros = 0;
 };
 
-// Of x on d >= 0 in the metric V^-1: of all faces whose free coordinates come out positive and
-// whose multipliers are not negative, there is one.
+// Of x on d >= 0 in the metric V^-1: of all faces whose free coordinates come out
+// positive and whose multipliers are not negative, there is one.
 class Orthant {
  public:
   explicit Orthant(const Matrix& V) : V_(V), J_(V.rows()) {
@@ -58,13 +62,15 @@ class Orthant {
       Matrix block(m, m);
       for (Index a = 0; a < m; ++a)
         for (Index b = 0; b < m; ++b)
-          block(a, b) = V(zero[static_cast<std::size_t>(a)], zero[static_cast<std::size_t>(b)]);
+          block(a, b) =
+              V(zero[static_cast<std::size_t>(a)], zero[static_cast<std::size_t>(b)]);
       inverse_.push_back(m > 0 ? Matrix(block.inverse()) : Matrix());
       zero_.push_back(std::move(zero));
     }
   }
 
-  // With the coordinates of a face at zero, d = x - V_.z V_zz^-1 x_z, distance x_z'V_zz^-1 x_z.
+  // With the coordinates of a face at zero, d = x - V_.z V_zz^-1 x_z, distance
+  // x_z'V_zz^-1 x_z.
   OrthantProjection project(const Vector& x) const {
     OrthantProjection best{std::numeric_limits<double>::infinity(), 0};
     for (std::size_t face = 0; face < zero_.size(); ++face) {
@@ -74,7 +80,8 @@ class Orthant {
       for (Index a = 0; a < m; ++a) at(a) = x(zero[static_cast<std::size_t>(a)]);
       const Vector multiplier = m > 0 ? Vector(inverse_[face] * at) : Vector();
       Vector d = x;
-      for (Index a = 0; a < m; ++a) d -= V_.col(zero[static_cast<std::size_t>(a)]) * multiplier(a);
+      for (Index a = 0; a < m; ++a)
+        d -= V_.col(zero[static_cast<std::size_t>(a)]) * multiplier(a);
       for (Index a = 0; a < m; ++a) d(zero[static_cast<std::size_t>(a)]) = 0.0;
       if (d.size() > 0 && d.minCoeff() < 0.0) continue;
       const double distance = m > 0 ? at.dot(multiplier) : 0.0;

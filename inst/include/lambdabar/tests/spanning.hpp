@@ -1,13 +1,16 @@
-// Do K benchmark returns span N test assets? R2 = a + B R1 + e; H0: a = 0 and B 1 = 1 (Huberman
-// and Kandel 1987, Journal of Finance 42, 873-888). With S residual cross-products of the free,
-// the a = 0, and the restricted fit (R2 - R1_K on R1_k - R1_K, no constant), U = |S_u| / |S_r|:
+// Do K benchmark returns span N test assets? R2 = a + B R1 + e; H0: a = 0 and B 1 = 1
+// (Huberman and Kandel 1987, Journal of Finance 42, 873-888). With S residual
+// cross-products of the free, the a = 0, and the restricted fit (R2 - R1_K on R1_k -
+// R1_K, no constant), U = |S_u| / |S_r|:
 //   joint   N >= 2: (U^-1/2 - 1)(T - K - N) / N ~ F(2 N, 2 (T - K - N))
 //           N = 1:  (U^-1 - 1)(T - K - 1) / 2 ~ F(2, T - K - 1)
 //   first   (|S_a| / |S_u| - 1)(T - K - N) / N ~ F(N, T - K - N)            a = 0
-//   second  (|S_r| / |S_a| - 1)(T - K - N + 1) / N ~ F(N, T - K - N + 1)    B 1 = 1 given a = 0
-//   wald    h'S^-1 h ~ chi2(2 N), h = (a, B 1 - 1), S the sum of its rows by `series`
-// The first three are exact if e is normal and independent; the two steps are those of Kan and
-// Zhou (2012, Annals of Economics and Finance 13, 139-187). Determinants come from QR factors.
+//   second  (|S_r| / |S_a| - 1)(T - K - N + 1) / N ~ F(N, T - K - N + 1)    B 1 = 1 given
+//   a = 0 wald    h'S^-1 h ~ chi2(2 N), h = (a, B 1 - 1), S the sum of its rows by
+//   `series`
+// The first three are exact if e is normal and independent; the two steps are those of
+// Kan and Zhou (2012, Annals of Economics and Finance 13, 139-187). Determinants come
+// from QR factors.
 #pragma once
 
 #include "../errors/series_sum.hpp"
@@ -59,7 +62,8 @@ inline SpanningTests spanning_tests(const Eigen::Ref<const Matrix>& returns,
   const Matrix free = detail::residuals_of(returns, X);
   const Vector last = benchmarks.col(K - 1);
   const double unrestricted = detail::log_determinant(free);
-  const double no_alpha = detail::log_determinant(detail::residuals_of(returns, benchmarks));
+  const double no_alpha =
+      detail::log_determinant(detail::residuals_of(returns, benchmarks));
   const double restricted = detail::log_determinant(detail::residuals_of(
       returns.colwise() - last, benchmarks.leftCols(K - 1).colwise() - last));
   SpanningTests out;
@@ -69,8 +73,8 @@ inline SpanningTests spanning_tests(const Eigen::Ref<const Matrix>& returns,
                      : std::expm1(0.5 * (restricted - unrestricted)) * left / n_assets;
 
   const Matrix coefficients = Eigen::HouseholderQR<Matrix>(X).solve(Matrix(returns));
-  const Matrix inverse = design.U.triangularView<Eigen::Upper>().solve(
-      Matrix::Identity(K + 1, K + 1));
+  const Matrix inverse =
+      design.U.triangularView<Eigen::Upper>().solve(Matrix::Identity(K + 1, K + 1));
   Matrix pick = Matrix::Zero(K + 1, 2);
   pick(0, 0) = 1.0;
   pick.col(1).tail(K).setOnes();

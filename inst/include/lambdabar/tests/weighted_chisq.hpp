@@ -1,12 +1,13 @@
 // P(sum_i lambda_i z_i^2 > x), z independent standard normal, lambda_i >= 0.
 //
-// A mixture of chi-squares with scale beta = min lambda (Ruben 1962, Annals of Mathematical
-// Statistics 33, 542-570): P = sum_k a_k P(chi2_{n + 2k} > x / beta), and with
-// q_i = 1 - beta / lambda_i,
-//   a_0 = prod sqrt(beta / lambda_i),   a_k = 1/(2k) sum_i T_ik,   T_ik = q_i (T_i,k-1 + a_k-1)
-// All a_k are positive and sum to one, so what is left out is known: less than 1e-12. Terms
-// grow with max / min, cost O(n) each. Values below 1e-5 of the largest are put at their mean:
-// what that changes is of the order of their squares, 1e-10.
+// A mixture of chi-squares with scale beta = min lambda (Ruben 1962, Annals of
+// Mathematical Statistics 33, 542-570): P = sum_k a_k P(chi2_{n + 2k} > x / beta), and
+// with q_i = 1 - beta / lambda_i,
+//   a_0 = prod sqrt(beta / lambda_i),   a_k = 1/(2k) sum_i T_ik,   T_ik = q_i (T_i,k-1 +
+//   a_k-1)
+// All a_k are positive and sum to one, so what is left out is known: less than 1e-12.
+// Terms grow with max / min, cost O(n) each. Values below 1e-5 of the largest are put at
+// their mean: what that changes is of the order of their squares, 1e-10.
 #pragma once
 
 #include "../base.hpp"
@@ -16,7 +17,8 @@
 namespace lambdabar {
 namespace detail {
 
-// log of (y/2)^a e^(-y/2) / Gamma(a + 1): what P(chi2_{2a + 2} > y) adds to P(chi2_{2a} > y).
+// log of (y/2)^a e^(-y/2) / Gamma(a + 1): what P(chi2_{2a + 2} > y) adds to P(chi2_{2a} >
+// y).
 inline double log_chisq_step(double a, double y) {
   return a * std::log(0.5 * y) - 0.5 * y - std::lgamma(a + 1.0);
 }
