@@ -145,7 +145,9 @@ efficient_row <- function(fit, series, call) {
       paste(count_of(n_moments, "moment"), "over", format_count(length(fit$kept)), "periods"),
       just_identified_note,
       paste0("too few periods: ", length(fit$kept), " for ", count_of(n_moments, "moment")),
-      "the covariance of the moments is singular"
+      "the covariance of the moments is singular",
+      "the covariance of the moments is not positive",
+      "the estimate did not converge"
     )
   )
 }

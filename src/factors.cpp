@@ -28,6 +28,7 @@ const char* refusal_name(lambdabar::Refusal refusal) {
     case lambdabar::Refusal::too_few_periods: return "too_few_periods";
     case lambdabar::Refusal::singular: return "singular";
     case lambdabar::Refusal::not_positive: return "not_positive";
+    case lambdabar::Refusal::no_convergence: return "no_convergence";
   }
   return "none";
 }

@@ -3,7 +3,8 @@
 //   g_t = (eps_t, f_t (x) eps_t, f_t - mu),  theta = (gamma_0, gamma_f, vec B, mu)
 // N (K + 1) + K moments, N - P of them over-identifying (P premia, gamma_0 only with an
 // intercept). S: long-run covariance of g_t at the two-pass OLS estimates, held;
-// Gauss-Newton on gbar'S^-1 gbar to convergence; J = T gbar'S^-1 gbar ~ chi2(N - P).
+// Gauss-Newton on gbar'S^-1 gbar to convergence; J = T gbar'S^-1 gbar ~ chi2(N - P). Without
+// convergence the test is refused: there is no number then.
 // Cost O((N K)^3); T must be larger than the number of moments.
 #pragma once
 
@@ -128,16 +129,29 @@ inline EfficientMoments efficient_moments(const TwoPassData& data,
   auto whiten = [&](const Matrix& M) -> Matrix {
     return cholesky.matrixL().solve(scale.cwiseInverse().asDiagonal() * M);
   };
+  // Gauss-Newton with halved steps; done when a full step would lower the criterion by less
+  // than a share of 1e-20.
   constexpr int kMostSteps = 200;
   Matrix W;
-  bool converged = false;
-  for (int step = 0; step < kMostSteps && !converged; ++step) {
+  Vector z = whiten(model.mean(theta));
+  out.refusal = Refusal::no_convergence;
+  for (int step = 0; step < kMostSteps && out.refusal != Refusal::none; ++step) {
     W = whiten(model.jacobian(theta));
-    const Vector change = W.colPivHouseholderQr().solve(whiten(model.mean(theta)));
-    theta -= change;
-    converged = change.norm() <= 1e-12 * theta.norm();
+    const Vector change = W.colPivHouseholderQr().solve(z);
+    // The criterion itself is known to rounding only.
+    const double now = z.squaredNorm(), most = now * (1.0 + 1e-12);
+    if ((W * change).squaredNorm() <= 1e-20 * now) out.refusal = Refusal::none;
+    double share = 1.0;
+    Vector next = whiten(model.mean(theta - change));
+    while (next.squaredNorm() > most && share > 1e-4) {
+      share *= 0.5;
+      next = whiten(model.mean(theta - share * change));
+    }
+    if (next.squaredNorm() > most) break;
+    theta -= share * change;
+    z = next;
   }
-  if (!converged) throw Error("input", "The efficient moments did not converge.", {});
+  if (out.refusal != Refusal::none) return out;
   W = whiten(model.jacobian(theta));
   out.premia = theta.head(P);
   out.covariance = (W.transpose() * W).inverse().topLeftCorner(P, P);

@@ -12,7 +12,8 @@ enum class Refusal {
   just_identified = 1,  // as many premia as assets: no pricing error to test
   too_few_periods = 2,  // no degree of freedom left in the denominator or the covariance
   singular = 3,         // the covariance of the tested errors is singular
-  not_positive = 4      // a truncated kernel gave a covariance that is not positive
+  not_positive = 4,     // a truncated kernel gave a covariance that is not positive
+  no_convergence = 5    // an iterated estimate did not settle
 };
 
 namespace detail {
