@@ -173,7 +173,7 @@ print.lb_r2 <- function(x, ...) {
     interval = ifelse(is.na(x$conf.low), "", paste(number(x$conf.low), "to", number(x$conf.high))),
     one = format_p(x$p_one), zero = format_p(x$p_zero)
   )
-  names(table)[4:6] <- c(paste0(100 * attr(x, "level"), "% interval"), "p (R2 = 1)", "p (R2 = 0)")
+  names(table)[4:6] <- c(paste0(100 * attr(x, "level"), "% interval"), "p (= 1)", "p (= 0)")
   print_columns(table, right = names(table)[-1L])
   notes <- nzchar(x$note)
   cat_lines(

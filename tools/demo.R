@@ -1,5 +1,5 @@
 # The main job on the invented market: health, premia on characteristics, the error ladder,
-# premia on factor exposures that stay and that move, joint tests.
+# premia on factor exposures that stay and that move, joint tests, and what a referee asks next.
 library(lambdabar)
 
 heading <- function(text) cat("\n", text, "\n", strrep("-", nchar(text)), "\n\n", sep = "")
@@ -53,6 +53,17 @@ cat("\n")
 print(alpha_test(fit))
 cat("\n")
 print(error_ladder(fit, terms = "mkt"))
+
+heading("7  What a referee asks next")
+print(pricing_r2(fit, rival = price_factors(portfolios, ret ~ mkt)))
+cat("\n")
+print(rank_test(fit))
+cat("\n")
+print(premium_set(fit))
+cat("\n")
+print(bandwidth_path(traits))
+cat("\n")
+print(break_test(traits, term = c("size", "value", "turnover")))
 
 cat("\nThese are statistics of an invented market. On real data they are statistical\n")
 cat("evidence under stated assumptions, not investment advice.\n")

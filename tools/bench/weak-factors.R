@@ -1,7 +1,7 @@
 # Weak and useless factors: what t-statistics, rank tests and premium sets do.
 #   Rscript tools/bench/weak-factors.R [runs] [file.csv]
-# strength: one factor of premium 0.5 % and standard deviation 4.5 % a month, 10 assets, 240 months,
-# betas of mean 1 and a given spread; how often 95 % intervals hold the premium realised in the
+# strength: one factor of premium 2 % (large, so that attenuation shows) and standard deviation 4.5 % a
+# month, 25 assets, 240 months, betas of mean 1 and a given spread; how often 95 % intervals hold the premium realised in the
 # sample. useless: the model has only noise, 25 assets are priced by a factor that is left out;
 # how often each test takes the noise for a priced factor.
 
@@ -15,9 +15,9 @@ covered <- function(set, value) {
 
 strength <- function(spread) {
   function() {
-    f <- matrix(rnorm(240L, 0.005, 0.045), dimnames = list(NULL, "mkt"))
-    betas <- 1 + spread * seq(-1.6, 1.6, length.out = 10L)
-    panel <- bench_panel(f %*% t(betas) + matrix(rnorm(2400L, 0, 0.04), 240L), f)
+    f <- matrix(rnorm(240L, 0.02, 0.045), dimnames = list(NULL, "mkt"))
+    betas <- 1 + spread * seq(-1.6, 1.6, length.out = 25L)
+    panel <- bench_panel(f %*% t(betas) + matrix(rnorm(6000L, 0, 0.04), 240L), f)
     fit <- price_factors(panel, ret ~ mkt)
     # Given the factors: the error of Shanken less the sampling error of the factor's mean.
     realised <- mean(f)
