@@ -87,7 +87,7 @@ price_latent <- function(panel, formula, n_latent = "penalised", intercept = FAL
   found <- latent_core(fit, if (fixed) as.integer(n_latent) else integer())
   fit$eigenvalues <- as.numeric(found$eigenvalues)
   fit$n_found <- found$found
-  fit <- utils::modifyList(fit, latent_pieces(found$fits[[1L]], fit$terms))
+  fit <- with_pieces(fit, found$fits[[1L]])
   fit$call <- match.call()
   restate(fit, errors)
 }
@@ -99,12 +99,15 @@ latent_core <- function(fit, counts, call = rlang::caller_env()) {
   ), call)
 }
 
-latent_pieces <- function(core, terms) {
-  list(
-    n_latent = core$p, estimate = stats::setNames(as.numeric(core$premium), terms),
-    rows = `colnames<-`(core$rows, terms), strength = as.numeric(core$strength),
-    r_squared = as.numeric(core$r_squared), explained = core$mean_r2, component_premia = as.numeric(core$gamma)
-  )
+# The fit with the estimates of one number of components.
+with_pieces <- function(fit, core) {
+  fit$n_latent <- core$p
+  fit$estimate <- stats::setNames(as.numeric(core$premium), fit$terms)
+  fit$rows <- `colnames<-`(core$rows, fit$terms)
+  fit$strength <- as.numeric(core$strength)
+  fit$r_squared <- as.numeric(core$r_squared)
+  fit$explained <- core$mean_r2
+  fit
 }
 
 # Returns and factors in the periods that have every factor; refuses holes in the returns.
@@ -144,7 +147,7 @@ latent_range <- function(fit, n_latent_range = seq_len(fit$most)) {
   }
   found <- latent_core(fit, as.integer(n_latent_range))
   rows <- lapply(found$fits, function(core) {
-    one <- restate(utils::modifyList(fit, latent_pieces(core, fit$terms)), fit$errors)
+    one <- restate(with_pieces(fit, core), fit$errors)
     tibble::tibble(n_latent = core$p, tidy(one)[c("term", "estimate", "std.error", "conf.low", "conf.high")])
   })
   out <- vctrs::vec_rbind(!!!rows)
@@ -207,7 +210,7 @@ latent_rule_name <- function(rule) {
 #' @exportS3Method ggplot2::autoplot
 autoplot.lb_latent <- function(object, n = 20L, ...) {
   rlang::check_installed("ggplot2")
-  shown <- utils::head(object$eigenvalues, n)
+  shown <- object$eigenvalues[seq_len(min(n, length(object$eigenvalues)))]
   data <- data.frame(j = seq_along(shown), value = shown / sum(object$eigenvalues))
   data$kept <- ifelse(data$j <= object$n_latent, "used", "left to the residual")
   ggplot2::ggplot(data, ggplot2::aes(x = .data$j, y = .data$value)) +

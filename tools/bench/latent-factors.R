@@ -34,7 +34,7 @@ draw_latent <- function() {
   )
 }
 
-# Equal Sharpe ratios; benchmarks that span.
+# Equal Sharpe ratios; benchmarks that span; a premium without a break.
 draw_traded <- function() {
   f <- matrix(rnorm(months * 3L, 0.012, 0.045), months, dimnames = list(NULL, c("a", "b", "c")))
   weights <- matrix(c(0.5, 0.5, 0.2, 0.8, 0.9, 0.1), 2L)
@@ -42,7 +42,8 @@ draw_traded <- function() {
   spanning <- spanning_test(spanned, ret ~ a + b)
   c(
     `Sharpe ratios, nothing in common` = sharpe_test(spanned, ~a, ~b)$p.value < 0.05,
-    stats::setNames(spanning$p.value < 0.05, paste("spanning,", spanning$test))
+    stats::setNames(spanning$p.value < 0.05, paste("spanning,", spanning$test)),
+    `break in a premium that has none` = break_test(price_factors(spanned, ret ~ a), "a", series = err_iid())$p.value < 0.05
   )
 }
 
