@@ -25,6 +25,14 @@ cpp_clustered <- function(design, period, n_periods, core, codes, n_codes, small
     .Call(`_lambdabar_cpp_clustered`, design, period, n_periods, core, codes, n_codes, small, threads)
 }
 
+cpp_clustered_average <- function(design, period, omega, theta, codes, n_codes, small) {
+    .Call(`_lambdabar_cpp_clustered_average`, design, period, omega, theta, codes, n_codes, small)
+}
+
+cpp_period_scores <- function(design, period, n_periods, core, threads) {
+    .Call(`_lambdabar_cpp_period_scores`, design, period, n_periods, core, threads)
+}
+
 cpp_wald <- function(theta, vcov, restrictions, value) {
     .Call(`_lambdabar_cpp_wald`, theta, vcov, restrictions, value)
 }
@@ -51,6 +59,18 @@ cpp_alpha_covariance <- function(input, kind, series, slot) {
 
 cpp_alpha_tests <- function(input, kinds, series, slot) {
     .Call(`_lambdabar_cpp_alpha_tests`, input, kinds, series, slot)
+}
+
+cpp_cluster_moments <- function(design, period, n_periods, core, code, n_codes) {
+    .Call(`_lambdabar_cpp_cluster_moments`, design, period, n_periods, core, code, n_codes)
+}
+
+cpp_few_clusters <- function(moments, power) {
+    .Call(`_lambdabar_cpp_few_clusters`, moments, power)
+}
+
+cpp_wild <- function(moments, theta, signs, complete, restricted, level) {
+    .Call(`_lambdabar_cpp_wild`, moments, theta, signs, complete, restricted, level)
 }
 
 cpp_refine_cells <- function(value, reference, cell, n_cells, n_classes) {

@@ -84,13 +84,16 @@ beta_design <- function(fit) {
 ladder_structures <- function(fit) {
   if (inherits(fit, "lb_pooled")) {
     return(list(
-      err_iid(), err_hetero(), err_cluster("asset"), err_cluster("period"), err_cluster("asset", "period")
+      err_iid(), err_hetero(), err_cluster("asset"), err_cluster("period"), err_cluster("asset", "period"), err_common()
     ))
   }
   if (!is.null(fit$asset_rows)) {
     return(list(err_assets(realised = TRUE), err_assets(), err_assets(series = err_hac())))
   }
   series <- list(err_iid(), err_hac(), err_hac("newey_west"), err_hac("andrews", "qs"))
+  if (fit$kind == "traits") {
+    return(c(series, if (fit$average != "precision") list(err_cluster("asset"), err_cluster("asset", "period"))))
+  }
   if (!is_two_pass(fit)) {
     return(series)
   }

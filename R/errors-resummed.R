@@ -48,42 +48,51 @@ stationary_index <- function(T, reps, length) {
   matrix(as.integer(at %% T), T)
 }
 
-# Two-sided p-values of t statistics, one a term, and how many errors an interval reaches.
+# Two-sided p-values of t statistics, one a term.
 reference_p <- function(covariance, statistic) {
   reference <- covariance$reference
-  if (is.null(reference)) {
-    return(2 * stats::pt(-abs(statistic), covariance$df))
-  }
-  if (reference$kind == "fixed_b") {
-    return(fixed_b_p(statistic, reference$b))
-  }
-  draws <- reference$t
-  vapply(seq_along(statistic), function(j) {
-    if (is.na(statistic[j])) NA_real_ else (1 + sum(draws[, j] >= abs(statistic[j]) * (1 - 1e-12))) / (nrow(draws) + 1)
-  }, 1)
+  switch(reference_kind(covariance),
+    t = 2 * stats::pt(-abs(statistic), covariance$df),
+    fixed_b = fixed_b_p(statistic, reference$b),
+    wild = reference$at$p,
+    resampled = {
+      draws <- reference$t
+      vapply(seq_along(statistic), function(j) {
+        if (is.na(statistic[j])) NA_real_ else (1 + sum(draws[, j] >= abs(statistic[j]) * (1 - 1e-12))) / (nrow(draws) + 1)
+      }, 1)
+    }
+  )
 }
 
-reference_reach <- function(covariance, level, n_terms) {
+reference_kind <- function(covariance) {
+  if (is.null(covariance$reference)) "t" else covariance$reference$kind
+}
+
+# Limits of the interval of each term.
+reference_interval <- function(covariance, estimate, std_error, level) {
   reference <- covariance$reference
-  if (is.null(reference)) {
-    return(rep(stats::qt((1 + level) / 2, covariance$df), n_terms))
+  if (reference_kind(covariance) == "wild") {
+    found <- if (level == 0.95) reference$at else wild_answer(reference, level)
+    return(list(low = found$lower, high = found$upper))
   }
-  if (reference$kind == "fixed_b") {
-    return(rep(fixed_b_quantile(level, reference$b), n_terms))
-  }
-  draws <- reference$t
-  at <- ceiling(level * (nrow(draws) + 1))
-  apply(draws, 2L, function(t) if (at > length(t)) Inf else sort(t)[at])
+  reach <- std_error * switch(reference_kind(covariance),
+    t = stats::qt((1 + level) / 2, covariance$df),
+    fixed_b = fixed_b_quantile(level, reference$b),
+    resampled = {
+      at <- ceiling(level * (nrow(reference$t) + 1))
+      apply(reference$t, 2L, function(t) if (at > length(t)) Inf else sort(t)[at])
+    }
+  )
+  list(low = estimate - reach, high = estimate + reach)
 }
 
 reference_phrase <- function(covariance) {
   reference <- covariance$reference
-  if (is.null(reference)) {
-    return(paste0("t with ", format_df(covariance$df), " df"))
-  }
-  switch(reference$kind,
+  switch(reference_kind(covariance),
+    t = paste0("t with ", paste(unique(format_df(range(covariance$df, na.rm = TRUE))), collapse = " to "), " df"),
     fixed_b = paste0("fixed-b critical values, b = ", format(reference$b, digits = 2)),
-    resampled = paste0("t resampled ", format_count(nrow(reference$t)), " times")
+    resampled = paste0("t resampled ", format_count(nrow(reference$t)), " times"),
+    wild = "p and intervals by inversion"
   )
 }
 

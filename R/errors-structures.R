@@ -16,7 +16,9 @@
 #' | `err_misspec()` | premia on estimated betas | as robust `err_eiv()`, and a model that does not price the assets |
 #' | `err_assets()` | bias-corrected betas of the whole sample | any distribution over assets, or clusters of them; periods independent |
 #' | `err_hetero()` | pooled | independent rows of unequal variance |
-#' | `err_cluster()` | pooled | any correlation inside clusters, in any number of ways |
+#' | `err_cluster()` | pooled; averaged premia of characteristics | any correlation inside clusters, in any number of ways |
+#' | `err_wild()` | pooled | few clusters, by resampling them |
+#' | `err_common()` | pooled; averaged premia | shocks common to all assets that persist over periods |
 #'
 #' @param adjust Whether to multiply by T/(T-1), so that independent periods give the sample
 #'   variance of the mean. Averages with unequal weights use the factor that is unbiased for
@@ -65,6 +67,15 @@
 #'   less the leverage, and by its square; MacKinnon and White 1985).
 #' @param ... Names of the columns whose values are the clusters, as strings: one for each way.
 #'   `"asset"` and `"period"` mean the panel's keys, whatever their columns are called.
+#' @param few `NULL`, or what to do about few clusters, one way and pooled fits only: `"cr2"` (Bell and
+#'   McCaffrey 2002, with degrees of freedom of its own for each term) or `"cr3"` (the cluster
+#'   jackknife).
+#' @param way Name of the column whose values are the clusters.
+#' @param draws Weights of the clusters in a draw: `"rademacher"` (-1 and 1; all sign vectors, and
+#'   exact, when there are no more of them than `reps`) or `"webb"` (six values, for fewer than about ten
+#'   clusters).
+#' @param null Whether residuals are those of the fit under the null, for each null anew (`TRUE`), or
+#'   of the estimate.
 #' @param small Small-sample factor of clustered errors with more than one way:
 #'   * `"each"` (default): each term of the inclusion and exclusion has its own
 #'     G/(G-1) (n-1)/(n-P);
@@ -95,6 +106,24 @@
 #' spaced: a gap in the calendar is closed. `err_overlap()` gives horizon - 1 lags full weight (Hansen
 #' and Hodrick 1980), by the calendar; a variance that is not positive becomes `NA`.
 #'
+#' `err_cluster()` works on averaged premia of characteristics too, through the rows that the
+#' average has for each observation: a firm effect that lasts, which the usual errors of averaged
+#' premia cannot see, is then allowed for. Each term is multiplied by G/(G-1), so that clusters of
+#' periods give the errors of `err_iid()`.
+#'
+#' `err_common()` adds up the rows of each period and sums these by a kernel (Driscoll and Kraay
+#' 1998): any correlation across assets, and one over time that dies out. It does not cover an effect
+#' that stays with a firm. With `adjust` pooled fits are multiplied by T/(T-1) (n-1)/(n-P), so that zero
+#' lags equal clusters of periods; for averaged premia it is the same as `err_hac()`.
+#'
+#' `err_cluster(few = )` and `err_wild()` are for some ten to fifty clusters, where errors clustered the
+#' usual way are too small. Both work from cross-products of each cluster. CR2 has Satterthwaite
+#' degrees of freedom under independent errors (Pustejovsky and Tipton 2018); joint tests take the
+#' smallest. `err_wild()` is the wild cluster bootstrap (Cameron, Gelbach and Miller 2008): `tidy()` has
+#' its p-values (symmetric, ties counted) and the limits of the interval of nulls that are not
+#' rejected, found by bisection from the estimate outwards; the error shown is the clustered one. With five
+#' clusters or fewer a 95 % interval is the whole line.
+#'
 #' Clusters in several ways follow Cameron, Gelbach and Miller (2011) and Thompson (2011). The
 #' result need not be positive semidefinite: it is then repaired (negative eigenvalues of the
 #' matrix scaled by heteroskedasticity-consistent errors become zero) with a warning, and a
@@ -109,8 +138,11 @@
 #' @return An object of class `lb_errors`.
 #'
 #' @references
-#' Andrews (1991), Econometrica 59, 817-858. Andrews and Monahan (1992), Econometrica 60,
-#' 953-966. Cameron, Gelbach and Miller (2011), Journal of Business & Economic Statistics 29,
+#' Andrews (1991), Econometrica 59, 817-858. Bell and McCaffrey (2002), Survey Methodology 28, 169-181.
+#' Cameron, Gelbach and Miller (2008), Review of Economics and Statistics 90, 414-427. Pustejovsky and
+#' Tipton (2018), Journal of Business & Economic Statistics 36, 672-683. Roodman, Nielsen, MacKinnon and
+#' Webb (2019), Stata Journal 19, 4-60. Andrews and Monahan (1992), Econometrica 60,
+#' 953-966. Driscoll and Kraay (1998), Review of Economics and Statistics 80, 549-560. Cameron, Gelbach and Miller (2011), Journal of Business & Economic Statistics 29,
 #' 238-249. Hansen (1982), Econometrica 50, 1029-1054. Hansen and Hodrick (1980), Journal of Political
 #' Economy 88, 829-853. Ibragimov and Mueller (2010), Journal of Business & Economic Statistics 28,
 #' 453-468. Jagannathan and Wang (1998), Journal of
@@ -250,7 +282,7 @@ err_hetero <- function(type = "HC1") {
 
 #' @rdname error_structures
 #' @export
-err_cluster <- function(..., small = "each") {
+err_cluster <- function(..., small = "each", few = NULL) {
   ways <- list(...)
   named <- vapply(ways, function(way) is.character(way) && length(way) == 1L && !is.na(way), NA)
   if (!length(ways) || !all(named) || !is.null(names(ways)) && any(nzchar(names(ways)))) {
@@ -265,8 +297,40 @@ err_cluster <- function(..., small = "each") {
   }
   new_errors(
     "lb_err_cluster",
-    ways = ways, small = check_choice(small, c("each", "min", "none"), "small")
+    ways = ways, small = check_choice(small, c("each", "min", "none"), "small"), few = check_few(few, ways)
   )
+}
+
+check_few <- function(few, ways, call = rlang::caller_env()) {
+  if (is.null(few)) {
+    return(NULL)
+  }
+  check_choice(few, c("cr2", "cr3"), "few", call)
+  if (length(ways) > 1L) {
+    abort_input("Corrections for few clusters exist for one way; {.arg few} comes with {length(ways)}.", call = call)
+  }
+  few
+}
+
+#' @rdname error_structures
+#' @export
+err_wild <- function(way, reps = 9999, draws = "rademacher", null = TRUE) {
+  if (!is.character(way) || length(way) != 1L || is.na(way)) {
+    abort_input("{.arg way} must be the name of one column, as a string.")
+  }
+  check_whole(reps, "reps", 99, 1e7)
+  new_errors(
+    "lb_err_wild", way = way, reps = reps, draws = check_choice(draws, c("rademacher", "webb"), "draws"),
+    null = check_flag(null, "null")
+  )
+}
+
+#' @rdname error_structures
+#' @export
+err_common <- function(lags = "rule", kernel = "bartlett", adjust = TRUE) {
+  series <- err_hac(lags, kernel, adjust = adjust)
+  class(series) <- c("lb_err_common", "lb_errors")
+  series
 }
 
 # `resummed`: whether sums that are no kernel of lags will do.
@@ -307,8 +371,10 @@ format.lb_errors <- function(x, ...) {
     lb_err_misspec = paste0("misspecified model, ", format(x$series)),
     lb_err_moments = paste0("stacked moments, ", format(x$series)),
     lb_err_assets = paste0("summed over assets", if (!is.null(x$by)) paste0(" by ", x$by), if (x$realised) ", realised premia" else if (inherits(x$series, "lb_err_hac")) paste0(", factors ", format(x$series))),
+    lb_err_common = paste0("common shocks, ", kernel_name(x$kernel), ", ", lags(x)),
     lb_err_hetero = paste0("heteroskedastic, ", x$type),
-    lb_err_cluster = paste0("clustered by ", first_few(x$ways))
+    lb_err_wild = paste0("wild clusters of ", x$way, if (x$draws == "webb") ", Webb", if (!x$null) ", unrestricted"),
+    lb_err_cluster = paste0("clustered by ", first_few(x$ways), if (!is.null(x$few)) paste0(", ", toupper(x$few)))
   )
 }
 

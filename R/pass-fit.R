@@ -34,11 +34,11 @@ tidy.lb_fit <- function(x, conf.level = 0.95, ...) {
   check_level(conf.level)
   std_error <- sqrt(diag(x$covariance$vcov))
   statistic <- x$estimate / std_error
-  reach <- reference_reach(x$covariance, conf.level, length(x$terms)) * std_error
+  interval <- reference_interval(x$covariance, x$estimate, std_error, conf.level)
   tibble::tibble(
     term = x$terms, estimate = unname(x$estimate), std.error = unname(std_error),
     statistic = unname(statistic), p.value = unname(reference_p(x$covariance, statistic)),
-    conf.low = unname(x$estimate - reach), conf.high = unname(x$estimate + reach)
+    conf.low = unname(interval$low), conf.high = unname(interval$high)
   )
 }
 
@@ -56,7 +56,7 @@ glance.lb_fit <- function(x, ...) {
   or_missing <- function(value, missing) if (is.null(value)) missing else value
   tibble::tibble(
     nobs = nobs(x), n_terms = length(x$terms), n_periods = usage$n_periods, n_assets = usage$n_assets,
-    r.squared = x$r_squared, df = covariance$df, errors = format(x$errors),
+    r.squared = x$r_squared, df = min(covariance$df, na.rm = TRUE), errors = format(x$errors),
     lags = or_missing(covariance$lags, NA_real_),
     bandwidth = or_missing(covariance$bandwidth, NA_real_),
     adjust = or_missing(covariance$adjust, NA), method = fit_method(x)

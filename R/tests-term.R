@@ -68,7 +68,7 @@ term_test <- function(fit, ...) {
 # are known for one restriction only, resampled ones for single coefficients.
 wald_law <- function(covariance, wald) {
   q <- wald$rank
-  den <- covariance$df
+  den <- min(covariance$df, na.rm = TRUE)
   statistic <- wald$statistic / q
   if (!is.null(covariance$cosines)) {
     den <- covariance$cosines - q + 1

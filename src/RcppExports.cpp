@@ -106,6 +106,36 @@ BEGIN_RCPP
     return rcpp_result_gen;
 END_RCPP
 }
+// cpp_clustered_average
+SEXP cpp_clustered_average(const Rcpp::List& design, const Rcpp::IntegerVector& period, const Eigen::VectorXd& omega, const Eigen::VectorXd& theta, const Rcpp::List& codes, const Rcpp::NumericVector& n_codes, const std::string& small);
+RcppExport SEXP _lambdabar_cpp_clustered_average(SEXP designSEXP, SEXP periodSEXP, SEXP omegaSEXP, SEXP thetaSEXP, SEXP codesSEXP, SEXP n_codesSEXP, SEXP smallSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type omega(omegaSEXP);
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type theta(thetaSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type codes(codesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericVector& >::type n_codes(n_codesSEXP);
+    Rcpp::traits::input_parameter< const std::string& >::type small(smallSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_clustered_average(design, period, omega, theta, codes, n_codes, small));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_period_scores
+SEXP cpp_period_scores(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& core, int threads);
+RcppExport SEXP _lambdabar_cpp_period_scores(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coreSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type core(coreSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_period_scores(design, period, n_periods, core, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_wald
 SEXP cpp_wald(const Eigen::Map<Eigen::VectorXd>& theta, const Eigen::Map<Eigen::MatrixXd>& vcov, const Eigen::Map<Eigen::MatrixXd>& restrictions, const Eigen::Map<Eigen::VectorXd>& value);
 RcppExport SEXP _lambdabar_cpp_wald(SEXP thetaSEXP, SEXP vcovSEXP, SEXP restrictionsSEXP, SEXP valueSEXP) {
@@ -191,6 +221,47 @@ BEGIN_RCPP
     Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
     Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
     rcpp_result_gen = Rcpp::wrap(cpp_alpha_tests(input, kinds, series, slot));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_cluster_moments
+SEXP cpp_cluster_moments(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& core, const Rcpp::IntegerVector& code, double n_codes);
+RcppExport SEXP _lambdabar_cpp_cluster_moments(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP coreSEXP, SEXP codeSEXP, SEXP n_codesSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type core(coreSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type code(codeSEXP);
+    Rcpp::traits::input_parameter< double >::type n_codes(n_codesSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_cluster_moments(design, period, n_periods, core, code, n_codes));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_few_clusters
+SEXP cpp_few_clusters(const Rcpp::List& moments, double power);
+RcppExport SEXP _lambdabar_cpp_few_clusters(SEXP momentsSEXP, SEXP powerSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type moments(momentsSEXP);
+    Rcpp::traits::input_parameter< double >::type power(powerSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_few_clusters(moments, power));
+    return rcpp_result_gen;
+END_RCPP
+}
+// cpp_wild
+SEXP cpp_wild(const Rcpp::List& moments, const Eigen::VectorXd& theta, const Rcpp::NumericMatrix& signs, bool complete, bool restricted, double level);
+RcppExport SEXP _lambdabar_cpp_wild(SEXP momentsSEXP, SEXP thetaSEXP, SEXP signsSEXP, SEXP completeSEXP, SEXP restrictedSEXP, SEXP levelSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type moments(momentsSEXP);
+    Rcpp::traits::input_parameter< const Eigen::VectorXd& >::type theta(thetaSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type signs(signsSEXP);
+    Rcpp::traits::input_parameter< bool >::type complete(completeSEXP);
+    Rcpp::traits::input_parameter< bool >::type restricted(restrictedSEXP);
+    Rcpp::traits::input_parameter< double >::type level(levelSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_wild(moments, theta, signs, complete, restricted, level));
     return rcpp_result_gen;
 END_RCPP
 }
@@ -645,6 +716,8 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_sum_series", (DL_FUNC) &_lambdabar_cpp_sum_series, 4},
     {"_lambdabar_cpp_heteroskedastic", (DL_FUNC) &_lambdabar_cpp_heteroskedastic, 6},
     {"_lambdabar_cpp_clustered", (DL_FUNC) &_lambdabar_cpp_clustered, 8},
+    {"_lambdabar_cpp_clustered_average", (DL_FUNC) &_lambdabar_cpp_clustered_average, 7},
+    {"_lambdabar_cpp_period_scores", (DL_FUNC) &_lambdabar_cpp_period_scores, 5},
     {"_lambdabar_cpp_wald", (DL_FUNC) &_lambdabar_cpp_wald, 4},
     {"_lambdabar_cpp_exposures", (DL_FUNC) &_lambdabar_cpp_exposures, 4},
     {"_lambdabar_cpp_shrink_betas", (DL_FUNC) &_lambdabar_cpp_shrink_betas, 5},
@@ -652,6 +725,9 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_shanken", (DL_FUNC) &_lambdabar_cpp_shanken, 3},
     {"_lambdabar_cpp_alpha_covariance", (DL_FUNC) &_lambdabar_cpp_alpha_covariance, 4},
     {"_lambdabar_cpp_alpha_tests", (DL_FUNC) &_lambdabar_cpp_alpha_tests, 4},
+    {"_lambdabar_cpp_cluster_moments", (DL_FUNC) &_lambdabar_cpp_cluster_moments, 6},
+    {"_lambdabar_cpp_few_clusters", (DL_FUNC) &_lambdabar_cpp_few_clusters, 2},
+    {"_lambdabar_cpp_wild", (DL_FUNC) &_lambdabar_cpp_wild, 6},
     {"_lambdabar_cpp_refine_cells", (DL_FUNC) &_lambdabar_cpp_refine_cells, 5},
     {"_lambdabar_cpp_cell_means", (DL_FUNC) &_lambdabar_cpp_cell_means, 5},
     {"_lambdabar_cpp_weighted_chisq", (DL_FUNC) &_lambdabar_cpp_weighted_chisq, 2},

@@ -5,9 +5,10 @@ test_that("each rung is the fit restated, and the pooled rungs are pooled()", {
   expect_setequal(ladder$term, c("size", "value"))
   hac <- ladder[ladder$errors == "Bartlett, 1 lag" & ladder$term == "value", ]
   expect_identical(hac$std.error, tidy(restate(fit, err_hac(lags = 1)))$std.error[3])
-  two_way <- ladder[ladder$errors == "clustered by asset and period" & ladder$term == "size", ]
+  two_way <- ladder[ladder$errors == "clustered by asset and period" & ladder$term == "size" & ladder$estimator == "pooled", ]
   expect_identical(two_way$std.error, tidy(pooled(panel, ret ~ size + value))$std.error[2])
-  expect_identical(two_way$estimator, "pooled")
+  own <- ladder[ladder$errors == "clustered by asset" & ladder$term == "size" & ladder$estimator == "averaged", ]
+  expect_identical(own$std.error, tidy(restate(fit, err_cluster("asset")))$std.error[2])
   plain <- ladder[ladder$errors == "independent", ]
   expect_true(all(plain$ratio == 1))
   expect_equal(hac$ratio, hac$std.error / plain$std.error[plain$term == "value" & plain$estimator == "averaged"])

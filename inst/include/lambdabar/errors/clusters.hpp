@@ -23,6 +23,10 @@
 // for each intersection that repeats, one integer a row. Cost: one read of the columns
 // and n r (r + groupings). Rows are summed in order: same bits for any number of threads.
 // Throws Error "cluster_id", "clusters", "leverage". Not handled: absorbed effects.
+//
+// Common shocks that persist (Driscoll and Kraay 1998, Review of Economics and Statistics
+// 80, 549-560): P_t = sum of psi_i in period t, summed over periods by a kernel.
+// period_scores() gives the P_t.
 #pragma once
 
 #include "../passes/pooled.hpp"
@@ -140,9 +144,8 @@ inline void add_outer(const Matrix& columns, Matrix& to) {
   to.selfadjointView<Eigen::Lower>().rankUpdate(columns);
 }
 
-// From whitened scores to psi: psi = (whiten L)' u, L as in bread_of(). Only the lower
-// triangle of `meat` is read.
-inline Matrix psi_meat(const Design& design, const PooledFit& fit, const Matrix& meat) {
+// whiten L, L as in bread_of(): psi = (whiten L)' u for a whitened score u.
+inline Matrix back_to_terms(const Design& design, const PooledFit& fit) {
   Matrix back = fit.whiten;
   const Index r = fit.rank;
   if (design.intercept && r > 1) {
@@ -153,6 +156,12 @@ inline Matrix psi_meat(const Design& design, const PooledFit& fit, const Matrix&
     }
     back.col(0) -= back.rightCols(r - 1) * centre;
   }
+  return back;
+}
+
+// From whitened scores to psi. Only the lower triangle of `meat` is read.
+inline Matrix psi_meat(const Design& design, const PooledFit& fit, const Matrix& meat) {
+  const Matrix back = back_to_terms(design, fit);
   const Matrix full = meat.selfadjointView<Eigen::Lower>();
   const Matrix psi = back.transpose() * full * back;
   return (psi + psi.transpose()) / 2;
@@ -384,6 +393,9 @@ class GroupSums {
     for (std::size_t i = 0; i < cross_.size(); ++i) cross_[i] += other.cross_[i];
   }
 
+  // rank x codes, of a grouping with codes.
+  Matrix totals(std::size_t s) const { return sums_[s].topRows(rank_); }
+
   Matrix meat(std::size_t s) const {
     Matrix meat = Matrix::Zero(rank_, rank_);
     if (!(*groupings_)[s].code) {
@@ -430,10 +442,10 @@ inline Index count_sum_chunks(const std::vector<Grouping>& groupings,
 }
 
 // One pass for all groupings. Chunks are cut by the data alone and joined in order.
-inline std::vector<ClusterSums> sum_groupings(const Design& design,
-                                              const PooledFit& fit,
-                                              const std::vector<Grouping>& groupings,
-                                              int threads) {
+inline GroupSums add_up(const Design& design,
+                        const PooledFit& fit,
+                        const std::vector<Grouping>& groupings,
+                        int threads) {
   const Index n_blocks = count_blocks(design.n_rows);
   const Index n_chunks = count_sum_chunks(groupings, fit.rank, n_blocks);
   std::vector<GroupSums> chunks(static_cast<std::size_t>(n_chunks),
@@ -448,9 +460,17 @@ inline std::vector<ClusterSums> sum_groupings(const Design& design,
     }
   });
   for (std::size_t c = 1; c < chunks.size(); ++c) chunks[0].join(chunks[c]);
+  return std::move(chunks[0]);
+}
+
+inline std::vector<ClusterSums> sum_groupings(const Design& design,
+                                              const PooledFit& fit,
+                                              const std::vector<Grouping>& groupings,
+                                              int threads) {
+  const GroupSums total = add_up(design, fit, groupings, threads);
   std::vector<ClusterSums> sums;
   for (std::size_t s = 0; s < groupings.size(); ++s) {
-    Matrix meat = chunks[0].meat(s);
+    Matrix meat = total.meat(s);
     if (!fit.from_rows) {
       const Matrix full = meat.selfadjointView<Eigen::Lower>();
       meat = fit.whiten * full * fit.whiten.transpose();
@@ -458,6 +478,18 @@ inline std::vector<ClusterSums> sum_groupings(const Design& design,
     sums.push_back({psi_meat(design, fit, meat), groupings[s].n_groups});
   }
   return sums;
+}
+
+// Sums of psi inside the groups of one grouping, r x codes.
+inline Matrix grouped_scores(const Design& design,
+                             const PooledFit& fit,
+                             const Grouping& grouping,
+                             int threads) {
+  const std::vector<Grouping> one{grouping};
+  const GroupSums sums = add_up(design, fit, one, threads);
+  const Matrix scores = sums.totals(0);
+  return back_to_terms(design, fit).transpose() *
+         (fit.from_rows ? scores : Matrix(fit.whiten * scores));
 }
 
 inline double small_sample_factor(SmallSample small,
@@ -480,6 +512,61 @@ inline void find_nesting(const UsedRows& used,
       if (is_nested(used, groupings[a], groupings[b])) nested_in[a] = static_cast<int>(b);
     }
   }
+}
+
+// The groupings of all terms and, with more than one dimension, every row its own group:
+// those errors scale the eigenvalues.
+inline std::vector<Grouping> with_rows_alone(const UsedRows& used,
+                                             const Intersections& sets) {
+  std::vector<Grouping> groupings = sets.groupings();
+  if (sets.n_terms() > 1 &&
+      std::all_of(
+          groupings.begin(), groupings.end(), [](const Grouping& g) { return g.code; }))
+    groupings.push_back({nullptr, 0, used.n_used});
+  return groupings;
+}
+
+// Inclusion and exclusion, and the repair of what comes out negative. `factor` gives the
+// small-sample factor of a number of groups.
+template <class Factor>
+ClusterCovariance combine_groupings(const UsedRows& used,
+                                    const Intersections& sets,
+                                    const std::vector<Grouping>& groupings,
+                                    const std::vector<ClusterSums>& sums,
+                                    const Factor& factor_of,
+                                    SmallSample small) {
+  std::size_t n_dimensions = 0;
+  while ((std::size_t{1} << n_dimensions) <= sets.n_terms()) ++n_dimensions;
+  const Index rank = sums[0].meat.rows();
+  ClusterCovariance to;
+  for (std::size_t d = 0; d < n_dimensions; ++d) to.n_groups.push_back(sums[d].n_groups);
+  const Index smallest = *std::min_element(to.n_groups.begin(), to.n_groups.end());
+  std::vector<double> factor(groupings.size(), 0.0);
+  for (std::size_t term = 0; term < sets.n_terms(); ++term) {
+    const std::size_t g = sets.grouping_of(term);
+    to.n_groups_terms.push_back(sums[g].n_groups);
+    factor[g] += sets.sign(term) *
+                 factor_of(small == SmallSample::min ? smallest : sums[g].n_groups);
+  }
+  to.raw.setZero(rank, rank);
+  Vector size = Vector::Zero(rank);
+  std::size_t rows_alone = 0;
+  for (std::size_t g = 0; g < groupings.size(); ++g) {
+    to.raw += factor[g] * sums[g].meat;
+    size += std::abs(factor[g]) * sums[g].meat.diagonal();
+    if (!groupings[g].code) rows_alone = g;
+  }
+  for (Index j = 0; j < rank; ++j)
+    to.not_positive.push_back(to.raw(j, j) <= kVarianceTolerance * size[j]);
+  const Matrix& scale = n_dimensions > 1 ? sums[rows_alone].meat : to.raw;
+  const PositiveRepair repair =
+      make_positive(to.raw, scale.diagonal().cwiseMax(0.0).cwiseSqrt());
+  to.vcov = repair.value;
+  to.min_eigen_relative = repair.min_eigen_relative;
+  to.n_clipped = repair.n_clipped;
+  to.nested_in.assign(n_dimensions, -1);
+  find_nesting(used, groupings, to.nested_in);
+  return to;
 }
 
 inline Matrix score_meat(const Design& design,
@@ -537,6 +624,12 @@ inline Matrix heteroskedastic(const Design& design,
   return covariance * (n / (n - static_cast<double>(fit.rank)));
 }
 
+// Sums of psi in each period, n_periods x r; zero where no row entered.
+inline Matrix period_scores(const Design& design, const PooledFit& fit, int threads) {
+  const detail::Grouping periods{design.period, design.n_periods, design.n_periods};
+  return detail::grouped_scores(design, fit, periods, threads).transpose();
+}
+
 // codes: D vectors of length n_rows with values 0 .. n_codes - 1, or -1 for missing.
 inline ClusterCovariance clustered(const Design& design,
                                    const PooledFit& fit,
@@ -544,52 +637,20 @@ inline ClusterCovariance clustered(const Design& design,
                                    const std::vector<Index>& n_codes,
                                    SmallSample small,
                                    int threads) {
-  const std::size_t n_dimensions = codes.size();
-  if (n_dimensions == 0) throw Error("input", "clusters need at least one dimension");
+  if (codes.empty()) throw Error("input", "clusters need at least one dimension");
   const detail::UsedRows used = detail::used_rows(design, fit);
   const detail::Intersections sets(used, codes, n_codes);
-  std::vector<detail::Grouping> groupings = sets.groupings();
-  const std::size_t n_groupings = groupings.size();
-  // Every row its own group: those errors scale the eigenvalues.
-  const std::size_t rows_alone = static_cast<std::size_t>(
-      std::find_if(groupings.begin(),
-                   groupings.end(),
-                   [](const detail::Grouping& g) { return !g.code; }) -
-      groupings.begin());
-  if (n_dimensions > 1 && rows_alone == n_groupings) {
-    groupings.push_back({nullptr, 0, fit.n_used});
-  }
+  const std::vector<detail::Grouping> groupings = detail::with_rows_alone(used, sets);
   const std::vector<ClusterSums> sums =
       detail::sum_groupings(design, fit, groupings, threads);
 
-  ClusterCovariance to;
-  for (std::size_t d = 0; d < n_dimensions; ++d) to.n_groups.push_back(sums[d].n_groups);
-  const Index smallest = *std::min_element(to.n_groups.begin(), to.n_groups.end());
-  std::vector<double> factor(n_groupings, 0.0);
-  for (std::size_t term = 0; term < sets.n_terms(); ++term) {
-    const std::size_t g = sets.grouping_of(term);
-    to.n_groups_terms.push_back(sums[g].n_groups);
-    const Index counted = small == SmallSample::min ? smallest : sums[g].n_groups;
-    factor[g] += sets.sign(term) * detail::small_sample_factor(small, counted, fit);
-  }
-  to.raw.setZero(fit.rank, fit.rank);
-  Vector size = Vector::Zero(fit.rank);
-  for (std::size_t g = 0; g < n_groupings; ++g) {
-    to.raw += factor[g] * sums[g].meat;
-    size += std::abs(factor[g]) * sums[g].meat.diagonal();
-  }
-  for (Index j = 0; j < fit.rank; ++j) {
-    to.not_positive.push_back(to.raw(j, j) <= detail::kVarianceTolerance * size[j]);
-  }
-  const Matrix& scale = n_dimensions > 1 ? sums[rows_alone].meat : to.raw;
-  const PositiveRepair repair =
-      make_positive(to.raw, scale.diagonal().cwiseMax(0.0).cwiseSqrt());
-  to.vcov = repair.value;
-  to.min_eigen_relative = repair.min_eigen_relative;
-  to.n_clipped = repair.n_clipped;
-  to.nested_in.assign(n_dimensions, -1);
-  detail::find_nesting(used, groupings, to.nested_in);
-  return to;
+  return detail::combine_groupings(
+      used,
+      sets,
+      groupings,
+      sums,
+      [&](Index n_groups) { return detail::small_sample_factor(small, n_groups, fit); },
+      small);
 }
 
 }  // namespace lambdabar
