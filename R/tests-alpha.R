@@ -160,7 +160,7 @@ distance_row <- function(fit, kind, series, call) {
   if (gross) check_gross(fit, call)
   result <- cpp_discount_factor(fit$input, gross, series_options(series), fit$slot_estimated - 1L)
   if (inherits(result, "lb_core_error")) {
-    return(c(empty, note = tolower_first(result$message)))
+    return(c(empty, note = as_note(result$message)))
   }
   if (!length(result$right$weights)) {
     return(c(empty, note = "as many coefficients as assets: the distance is zero"))

@@ -91,7 +91,7 @@ r2_of <- function(measure, fit, series) {
   )
   result <- cpp_pricing_r2(fit$input, measure == "gls", series_options(series), fit$slot_estimated - 1L)
   if (inherits(result, "lb_core_error")) {
-    missing$note <- tolower_first(result$message)
+    missing$note <- as_note(result$message)
     return(missing)
   }
   result$note <- if (is.null(result$one$weights) || !length(result$one$weights)) {
@@ -103,7 +103,8 @@ r2_of <- function(measure, fit, series) {
   result
 }
 
-tolower_first <- function(text) paste0(tolower(substr(text, 1L, 1L)), sub("\\.$", "", substr(text, 2L, nchar(text))))
+# A sentence of the core as a note: no capital (but for abbreviations), no full stop.
+as_note <- function(text) sub("\\.$", "", sub("^([A-Z])([a-z ])", "\\L\\1\\E\\2", text, perl = TRUE))
 
 r2_row <- function(measure, found, level) {
   reach <- stats::qnorm((1 + level) / 2) * found$std_error

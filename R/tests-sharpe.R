@@ -130,9 +130,15 @@ sharpe_pair <- function(a, b, ratio_a, ratio_b, spread) {
       return(out)
     }
   }
-  out$statistic <- (ratio_a$squared - ratio_b$squared) / sqrt(spread(cbind(ratio_a$rows - ratio_b$rows))[1L])
-  out$p.value <- 2 * stats::pnorm(-abs(out$statistic))
   out$num.df <- out$den.df <- NA_real_
+  error <- sqrt(spread(cbind(ratio_a$rows - ratio_b$rows))[1L])
+  if (!(error > 1e-12 * sqrt(spread(cbind(ratio_a$rows))[1L]))) {
+    out[c("statistic", "p.value")] <- NA_real_
+    out$note <- "the same portfolios under other names"
+    return(out)
+  }
+  out$statistic <- (ratio_a$squared - ratio_b$squared) / error
+  out$p.value <- 2 * stats::pnorm(-abs(out$statistic))
   out$note <- "difference over its error, z"
   out
 }

@@ -127,7 +127,7 @@ test_that("two models are compared by the case that they are in", {
 test_that("samples that cannot carry a measure say why", {
   short <- price_factors(priced_panel(T = 10, N = 12), ret ~ mkt)
   found <- pricing_r2(short)
-  expect_true(is.na(found$estimate[2]) && grepl("more periods than assets", found$note[2]))
+  expect_true(is.na(found$estimate[2]) && grepl("^GLS needs more periods than assets$", found$note[2]))
   exact <- price_factors(priced_panel(T = 60, N = 3), ret ~ mkt + smb)
   found <- pricing_r2(exact)
   expect_true(all(is.na(found$p_one)))

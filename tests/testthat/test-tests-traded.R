@@ -97,6 +97,9 @@ test_that("comparisons refuse what is no model", {
   data <- panel$data
   data$twice <- 2 * data$mkt
   expect_error(sharpe_test(asset_panel(data, "asset", "period"), ~ mkt + twice, ~ smb), class = "lambdabar_error_rank")
+  same <- sharpe_test(asset_panel(data, "asset", "period"), ~mkt, ~twice)
+  expect_true(is.na(same$p.value) && !is.nan(same$p.value))
+  expect_match(same$note, "same portfolios")
   expect_output(print(sharpe_test(panel, ~ mkt, ~ smb)), "adjusted")
 })
 

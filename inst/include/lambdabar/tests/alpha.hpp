@@ -9,9 +9,8 @@
 //   f_approx      Q / (1 + c) (T - K - N + q) / (N - q) ~ F(N - q, T - K - N + q),
 //                 Q = corrected (1 + c) / T: Shanken's cross-sectional regression test,
 //                 approximate for q > 0
-//   moments       S = sum of rows e_t (1 - w_t) / T under `series` (estimated betas; the
-//   J
-//                 of the moment conditions at the two-pass estimates)
+//   moments       S = sum of rows e_t (1 - w_t) / T under `series` (estimated betas; the J of
+//                 the moment conditions at the two-pass estimates)
 //   grs, grs_chisq, grs_lr, grs_moments   see intercepts.hpp
 // Data-driven lags of `series` come from the averaged pricing errors, each scaled to unit
 // variance, with equal weights: they do not depend on the basis C.

@@ -2,10 +2,10 @@
 // the returns, excess returns (the caller's word). N assets, T periods, K factors,
 // divisor T, theta2 = mean f' Vf^-1 mean f, Q = a' Sigma^-1 a (Gibbons, Ross and Shanken
 // 1989):
-//   grs           Q / (1 + theta2) (T - N - K) / N ~ F(N, T - N - K), exact if e is
-//   normal grs_chisq     T Q / (1 + theta2) ~ chi2(N) grs_lr        T log(1 + Q / (1 +
-//   theta2)) ~ chi2(N) grs_moments   a' S^-1 a ~ chi2(N), S = sum of rows e_t (1 - mean
-//   f' Vf^-1 d_t) / T under
+//   grs           Q / (1 + theta2) (T - N - K) / N ~ F(N, T - N - K), exact if e is normal
+//   grs_chisq     T Q / (1 + theta2) ~ chi2(N)
+//   grs_lr        T log(1 + Q / (1 + theta2)) ~ chi2(N)
+//   grs_moments   a' S^-1 a ~ chi2(N), S = sum of rows e_t (1 - mean f' Vf^-1 d_t) / T under
 //                 a series rule (Hansen 1982)
 // Data-driven lags come from the intercepts' rows, each scaled to unit variance, with
 // equal weights. No second pass is needed, so N may be smaller than K. A test that the
