@@ -1,15 +1,13 @@
-// Clusters for averaged cross-sections: their estimate has a row for each observation
-// too,
-//   psi_it = omega_t S_t^-1 (x_it - mean_t x) w_it u_it,   slopes
-//   psi_it = omega_t w_it v_it / W_t - mean_t x' (the slopes' row),   constant
-// with v the residual at the averaged coefficients, u less its mean in the period, S_t
-// and W_t the period's centred cross-products and weight. Inside a period they add up to
-// the period's influence row, omega_t (b_t - b). Residuals at the period's own slopes
-// would add up to zero, and without taking the mean out a common shock would enter the
-// sums of an asset. Inclusion and exclusion as in clusters.hpp, each term times G / (G -
-// 1): clusters of periods give the usual error. Without a constant in the design nothing
-// is centred. Cost: three reads of the columns, one thread; memory T P^2 and P numbers a
-// group.
+// Clusters for averaged cross-sections: their estimate has a row for each observation too,
+//   slopes    psi_it = omega_t S_t^-1 (x_it - mean_t x) w_it u_it
+//   constant  psi_it = omega_t w_it v_it / W_t - mean_t x' (the slopes' row)
+// with v the residual at the averaged coefficients, u less its mean in the period, S_t and
+// W_t the period's centred cross-products and weight. Inside a period they add up to the
+// period's influence row, omega_t (b_t - b). Residuals at the period's own slopes would add
+// up to zero, and without taking the mean out a common shock would enter the sums of an
+// asset. Inclusion and exclusion as in clusters.hpp, each term times G / (G - 1): clusters
+// of periods give the usual error. Without a constant in the design nothing is centred.
+// Cost: three reads of the columns, one thread; memory T P^2 and P numbers a group.
 #pragma once
 
 #include "clusters.hpp"

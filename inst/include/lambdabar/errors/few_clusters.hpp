@@ -2,21 +2,20 @@
 // in coordinates where the sum of S_g is the identity (u = whitened terms). G r^2
 // numbers.
 //   CR2  psi_g = (I - S_g)^-1/2 s_g (Bell and McCaffrey 2002, Survey Methodology 28,
-//   169-181;
-//        Pustejovsky and Tipton 2018, Journal of Business & Economic Statistics 36,
-//        672-683), with Satterthwaite degrees of freedom for a contrast v under
-//        independent errors: d_g = v'F S_g F v, r_g = F S_g v, F = (I - S_g)^-1/2, tr B =
-//        sum (d_g - r_g'r_g), tr B^2 = sum d_g^2 - 2 sum d_g r_g'r_g + |sum r_g r_g'|^2,
-//        df = (tr B)^2 / tr B^2
+//        169-181; Pustejovsky and Tipton 2018, Journal of Business & Economic Statistics
+//        36, 672-683), with Satterthwaite degrees of freedom for a contrast v under
+//        independent errors: with F = (I - S_g)^-1/2, d_g = v'F S_g F v, r_g = F S_g v,
+//        tr B = sum (d_g - r_g'r_g),
+//        tr B^2 = sum d_g^2 - 2 sum d_g r_g'r_g + |sum r_g r_g'|^2,  df = (tr B)^2 / tr B^2
 //   CR3  psi_g = (I - S_g)^-1 s_g, the change of the estimate without the cluster;
 //        V = (G - 1) / G sum psi_g psi_g', the cluster jackknife about the estimate
 //   wild cluster bootstrap of a contrast (Cameron, Gelbach and Miller 2008, Review of
-//   Economics
-//        and Statistics 90, 414-427; fast form of Roodman, Nielsen, MacKinnon and Webb
-//        2019, Stata Journal 19, 4-60): with x = theta - r, s~_g = s_g + S_g v x / v'v
-//        (the scores of the fit under the null), a draw w: d = sum w_g s~_g, z_g = w_g
-//        v's~_g - v'S_g d, t* = v'd / sqrt(m sum z_g^2). Numerator and z_g are linear in
-//        x, so a draw is five numbers and any other null costs O(1).
+//        Economics and Statistics 90, 414-427; fast form of Roodman, Nielsen, MacKinnon and
+//        Webb 2019, Stata Journal 19, 4-60): with x = theta - r, s~_g = s_g + S_g v x / v'v
+//        (the scores of the fit under the null) and a draw w,
+//        d = sum w_g s~_g,  z_g = w_g v's~_g - v'S_g d,  t* = v'd / sqrt(m sum z_g^2).
+//        Numerator and z_g are linear in x, so a draw is five numbers and any other null
+//        costs O(1).
 // With weights that vary inside a cluster CR2 is that of the data scaled by their roots.
 // Not handled: absorbed effects; more than one way.
 #pragma once

@@ -5,14 +5,12 @@
 //             Statistics 36, 541-559): t with B degrees of freedom; B = T - 1 gives
 //             independent periods times T/(T-1)
 //   blocks    q/(q-1) sum over q runs of periods of (sum of rows)(sum of rows)', runs end
-//   at
-//             floor(j T / q) (Ibragimov and Mueller 2010, Journal of Business & Economic
+//             at floor(j T / q) (Ibragimov and Mueller 2010, Journal of Business & Economic
 //             Statistics 28, 453-468): t with q - 1
-//   geometric sum_l k(l) sum_t h_t h_{t+l}', k(l) = (1 - l/T) r^l + (l/T) r^(T-l): the
-//   exact
+//   geometric sum_l k(l) sum_t h_t h_{t+l}', k(l) = (1 - l/T) r^l + (l/T) r^(T-l): the exact
 //             variance of the stationary bootstrap with blocks of mean length 1 / (1 - r)
-//             (Politis and Romano 1994, Journal of the American Statistical Association
-//             89, 1303-1313); nothing is drawn
+//             (Politis and Romano 1994, Journal of the American Statistical Association 89,
+//             1303-1313); nothing is drawn
 // Cost O(T B P + B P^2), O(T P + q P^2), O(T^2 P).
 #pragma once
 

@@ -3,8 +3,8 @@
 // 557-590):
 //   excess returns  m_t = 1 - b'(f_t - mean f):  C = Cov(R, f), U = Var(R), target mean R
 //                   (Kan and Robotti 2008, Journal of Empirical Finance 15, 816-838)
-//   gross returns   m_t = b'(1, f_t):            C = mean R (1, f'), U = mean R R',
-//   target 1 b = (C'U^-1 C)^-1 C'U^-1 target,  e = target - C b,  delta^2 = e'U^-1 e
+//   gross returns   m_t = b'(1, f_t):  C = mean R (1, f'), U = mean R R', target 1
+//   b = (C'U^-1 C)^-1 C'U^-1 target,  e = target - C b,  delta^2 = e'U^-1 e
 // Rows of b (Gospodinov, Kan and Robotti 2014, Review of Financial Studies 27,
 // 2139-2170), with H = (C'U^-1 C)^-1, p_t = C'U^-1 R_t, u_t = e'U^-1 R_t, x_t = f_t or
 // (1, f_t); R and x less their means for excess returns:

@@ -3,9 +3,8 @@
 //   g_t = (eps_t, f_t (x) eps_t, f_t - mu),  theta = (gamma_0, gamma_f, vec B, mu)
 // N (K + 1) + K moments, N - P of them over-identifying (P premia, gamma_0 only with an
 // intercept). S: long-run covariance of g_t at the two-pass OLS estimates, held;
-// Gauss-Newton on gbar'S^-1 gbar to convergence; J = T gbar'S^-1 gbar ~ chi2(N - P). Without
-// convergence the test is refused: there is no number then.
-// Cost O((N K)^3); T must be larger than the number of moments.
+// Gauss-Newton on gbar'S^-1 gbar to convergence; J = T gbar'S^-1 gbar ~ chi2(N - P). Cost
+// O((N K)^3); T must be larger than the number of moments.
 #pragma once
 
 #include "../passes/two_pass.hpp"

@@ -1,8 +1,7 @@
-// The betas of a complete panel, ready for questions on their rank.
-// N assets, T periods, K factors, divisor T. With a free constant in the second pass only
-// differences between assets count: returns are taken to n = N - 1 orthonormal contrasts
-// (an equal beta for all assets is useless then); without one n = N. Which contrasts
-// plays no part.
+// The betas of a complete panel, ready for questions on their rank. N assets, T periods,
+// K factors, divisor T. With a free constant in the second pass only differences between
+// assets count: returns are taken to n = N - 1 orthonormal contrasts (an equal beta for
+// all assets is useless then); without one n = N. Which contrasts plays no part.
 //   Q = Cov f = L L',  Sigma = Cov e,  G'G = Sigma^-1
 //   theta = G B L (n x K), whose squared singular values are d_1 >= .. >= d_K
 // from two QRs: neither Q nor Sigma is formed. d = rho^2 / (1 - rho^2), rho the canonical

@@ -6,10 +6,10 @@
 //   rows   u = a'W r_t, v = e0'W r_t, y = 1 - w_t;  OLS (2 (1 - R2) v - 2 u y) / (Q0 T),
 //          GLS (u^2 - 2 u y + (1 - R2)(2 v - v^2)) / (Q0 T); valid for 0 < R2 < 1
 //   R2 = 1: T Q against sum xi_i chi2_1, xi: eigenvalues of P'F S F'P, F'F = W, P
-//   orthonormal
+//     orthonormal
 //           with P'F X = 0, S the long-run covariance of e_t (1 - w_t)
 //   R2 = 0: T gamma_f'C gamma_f against sum xi_i chi2_1, xi: eigenvalues of C^1/2 Vg
-//   C^1/2,
+//     C^1/2,
 //           Vg the long-run covariance of the misspecified rows of gamma_f at w_t = 0
 // All moments have divisor T. Cost O(T N^2 + N^3).
 //

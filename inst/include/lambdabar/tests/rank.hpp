@@ -2,12 +2,11 @@
 // them, is useless for premia. See loadings.hpp for theta, d, n.
 //   cragg_donald     T sum_{j>q} d_j                                    homoskedastic
 //                    (Cragg and Donald 1997, Journal of Econometrics 76, 223-250)
-//   bartlett         (T - 1 - (n + K + 1) / 2) sum_{j>q} log(1 + d_j)   the same, better
-//   size kleibergen_paap  T l'Omega^-1 l, l = vec(U2' theta V2), U2, V2 the trailing
-//   singular
+//   bartlett         (T - 1 - (n + K + 1) / 2) sum_{j>q} log(1 + d_j); better size
+//   kleibergen_paap  T l'Omega^-1 l, l = vec(U2' theta V2), U2, V2 the trailing singular
 //                    vectors (all n - q of the left ones), Omega the long-run covariance
-//                    of (V2'L^-1 f_t) (x) (U2'G e_t) (Kleibergen and Paap 2006, Journal
-//                    of Econometrics 133, 97-126)
+//                    of (V2'L^-1 f_t) (x) (U2'G e_t)
+//                    (Kleibergen and Paap 2006, Journal of Econometrics 133, 97-126)
 // All against chi2((n - q)(K - q)). The last rejects too often unless T is large against
 // its degrees of freedom; a wild bootstrap that imposes rank q, one sign a period, mends
 // that. Cost O(T n^2) and O(T (n - q)^2 (K - q)^2) for the last, for each draw again.

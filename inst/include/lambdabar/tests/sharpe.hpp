@@ -7,10 +7,9 @@
 // 1840-1874).
 //
 // Is one model as good as each of J others? delta_j = theta2 less that of model j, V its
-// covariance: LR = min_{d >= 0} (delta - d)'V^-1 (delta - d) against
-// sum_{k >= 1} w_k P(chi2_k > LR), w_k the probability that the projection of N(0, V) on
-// d >= 0 has k zeros, simulated from given draws. The projection goes through the 2^J
-// faces.
+// covariance: LR = min_{d >= 0} (delta - d)'V^-1 (delta - d) against sum_{k >= 1} w_k
+// P(chi2_k > LR), w_k the probability that the projection of N(0, V) on d >= 0 has k
+// zeros, simulated from given draws. The projection goes through the 2^J faces.
 #pragma once
 
 #include "../passes/projection.hpp"

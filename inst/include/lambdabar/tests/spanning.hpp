@@ -5,9 +5,9 @@
 //   joint   N >= 2: (U^-1/2 - 1)(T - K - N) / N ~ F(2 N, 2 (T - K - N))
 //           N = 1:  (U^-1 - 1)(T - K - 1) / 2 ~ F(2, T - K - 1)
 //   first   (|S_a| / |S_u| - 1)(T - K - N) / N ~ F(N, T - K - N)            a = 0
-//   second  (|S_r| / |S_a| - 1)(T - K - N + 1) / N ~ F(N, T - K - N + 1)    B 1 = 1 given
-//   a = 0 wald    h'S^-1 h ~ chi2(2 N), h = (a, B 1 - 1), S the sum of its rows by
-//   `series`
+//   second  (|S_r| / |S_a| - 1)(T - K - N + 1) / N ~ F(N, T - K - N + 1)    B 1 = 1
+//           given a = 0
+//   wald    h'S^-1 h ~ chi2(2 N), h = (a, B 1 - 1), S the sum of its rows by `series`
 // The first three are exact if e is normal and independent; the two steps are those of
 // Kan and Zhou (2012, Annals of Economics and Finance 13, 139-187). Determinants come
 // from QR factors.

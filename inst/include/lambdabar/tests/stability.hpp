@@ -1,8 +1,8 @@
 // Did the mean of a series change at an unknown date (Andrews 1993, Econometrica 61,
 // 821-856)? For each date tau that leaves a share `trim` on both sides
 //   W(tau) = (m1 - m2)^2 / V,  V the variance of m1 - m2 with each part about its own
-//   mean: rows h_t = (x_t - m1) / tau before, -(x_t - m2) / (T - tau) after, summed by
-//   `series`
+//     mean:
+//   rows h_t = (x_t - m1) / tau before, -(x_t - m2) / (T - tau) after, summed by `series`
 // The statistic is the largest. Cost O(T) dates times the sum.
 #pragma once
 

@@ -4,7 +4,7 @@
 // Mathematical Statistics 33, 542-570): P = sum_k a_k P(chi2_{n + 2k} > x / beta), and
 // with q_i = 1 - beta / lambda_i,
 //   a_0 = prod sqrt(beta / lambda_i),   a_k = 1/(2k) sum_i T_ik,   T_ik = q_i (T_i,k-1 +
-//   a_k-1)
+//     a_k-1)
 // All a_k are positive and sum to one, so what is left out is known: less than 1e-12.
 // Terms grow with max / min, cost O(n) each. Values below 1e-5 of the largest are put at
 // their mean: what that changes is of the order of their squares, 1e-10.
