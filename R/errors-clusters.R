@@ -18,11 +18,12 @@ error_covariance.lb_err_cluster <- function(errors, fit, call = rlang::caller_en
       fit$design, fit$panel$period, period_weights(fit, call), unname(fit$estimate), code, n_codes, errors$small
     )
   } else {
-    cpp_clustered(fit$design, fit$panel$period, length(fit$panel$periods), fit$core, code, n_codes, errors$small, thread_count())
+    cpp_clustered(estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, code, n_codes, errors$small, thread_count())
   }
   refuse_missing_cluster(result, errors, fit, call)
   result <- core_result(result, call)
   warn_cluster_trouble(result, errors, fit)
+  if (!averaged && errors$small != "none") result$vcov <- result$vcov * effects_factor(fit, errors$ways, call)
   aliased <- if (averaged) rep(FALSE, length(fit$terms)) else fit$core$aliased
   bad <- rep(FALSE, length(fit$terms))
   bad[!aliased] <- result$not_positive
@@ -44,8 +45,9 @@ cluster_moments <- function(way, errors, fit, call) {
     refuse_errors(errors, fit, "They are for pooled fits: fit the same formula with {.fn pooled}.", call)
   }
   codes <- cluster_codes(way, fit$panel, call)
+  refuse_crossing(fit, way, errors, call)
   moments <- cpp_cluster_moments(
-    fit$design, fit$panel$period, length(fit$panel$periods), fit$core, codes$code, codes$n
+    estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, codes$code, codes$n
   )
   refuse_missing_cluster(moments, list(ways = way), fit, call)
   row_result(moments, fit$panel, call = call)
@@ -140,7 +142,7 @@ error_covariance.lb_err_common <- function(errors, fit, call = rlang::caller_env
     return(series_covariance(errors, fit$rows, fit$slot, fit))
   }
   scores <- row_result(
-    cpp_period_scores(fit$design, fit$panel$period, length(fit$panel$periods), fit$core, thread_count()), fit$panel, call = call
+    cpp_period_scores(estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, thread_count()), fit$panel, call = call
   )
   present <- which(rowSums(scores != 0) > 0)
   T <- length(present)
@@ -150,7 +152,7 @@ error_covariance.lb_err_common <- function(errors, fit, call = rlang::caller_env
   weights <- as.numeric(fit$terms[!fit$core$aliased] != "(Intercept)")
   if (!any(weights > 0)) weights[] <- 1
   sum <- core_result(cpp_sum_series(scores[present, , drop = FALSE], fit$panel$slot[present] - 1L, weights, series_options(errors)), call)
-  factor <- if (errors$adjust) T / (T - 1) * (fit$n_used - 1) / (fit$n_used - fit$rank) else 1
+  factor <- if (errors$adjust) T / (T - 1) * (fit$n_used - 1) / (fit$n_used - fit$rank) * effects_factor(fit, "period", call) else 1
   list(
     vcov = blank_nonpositive(expand_aliased(sum$S * factor, fit$core$aliased), fit$terms), df = T - 1,
     lags = sum$lags, bandwidth = sum$bandwidth,

@@ -70,7 +70,7 @@ is_two_pass <- function(fit) inherits(fit, "lb_premia") && fit$kind == "factors"
 error_covariance.lb_err_iid <- function(errors, fit, call = rlang::caller_env()) {
   if (inherits(fit, "lb_pooled")) {
     return(list(
-      vcov = fit$sigma2 * fit$bread, df = fit$n_used - fit$rank,
+      vcov = fit$sigma2 * fit$bread, df = fit$n_used - fit$rank - (if (is.null(fit$effects)) 0 else fit$effects$rank),
       phrase = "independent rows of equal variance"
     ))
   }
@@ -218,12 +218,17 @@ error_covariance.lb_err_hetero <- function(errors, fit, call = rlang::caller_env
     refuse_errors(errors, fit, "Variation over periods already carries heteroskedasticity: use {.fn err_iid} or {.fn err_hac}.", call)
   }
   type <- as.integer(substr(errors$type, 3L, 3L))
+  if (type >= 2L && !is.null(fit$effects)) {
+    refuse_errors(errors, fit, "HC2 and HC3 need the leverage of the absorbed effects: use {.val HC1} or clusters.", call)
+  }
   vcov <- row_result(
-    cpp_heteroskedastic(fit$design, fit$panel$period, length(fit$panel$periods), fit$core, type, thread_count()),
+    cpp_heteroskedastic(estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, type, thread_count()),
     fit$panel, call = call
   )
+  df <- fit$n_used - fit$rank - (if (is.null(fit$effects)) 0 else fit$effects$rank)
+  if (type == 1L) vcov <- vcov * (fit$n_used - fit$rank) / df
   list(
-    vcov = expand_aliased(vcov, fit$core$aliased), df = fit$n_used - fit$rank,
+    vcov = expand_aliased(vcov, fit$core$aliased), df = df,
     phrase = paste0("heteroskedasticity-consistent (", errors$type, ")")
   )
 }

@@ -141,6 +141,9 @@ augment.lb_fit <- function(x, ...) {
 #' @rdname fit_rows
 #' @export
 fitted.lb_fit <- function(object, ...) {
+  if (!is.null(object$effects)) {
+    return(cpp_response(object$design, object$panel$period, length(object$panel$periods)) - residuals(object))
+  }
   design <- if (is_two_pass(object)) beta_design(object) else object$design
   cpp_linear_predictor(design, object$panel$period, length(object$panel$periods), object$estimate)
 }
@@ -151,7 +154,7 @@ fitted.lb_fit <- function(object, ...) {
 #' @export
 residuals.lb_fit <- function(object, ...) {
   if (inherits(object, "lb_pooled")) {
-    return(cpp_pooled_residuals(object$design, object$panel$period, length(object$panel$periods), object$core))
+    return(cpp_pooled_residuals(estimation_design(object), object$panel$period, length(object$panel$periods), object$core))
   }
   cpp_response(object$design, object$panel$period, length(object$panel$periods)) - fitted(object)
 }
@@ -244,6 +247,7 @@ fit_usage <- function(fit) {
   )
   counts$status <- if (is.null(status)) ifelse(counts$n_used > 0, "pooled", "empty") else status
   if (is_two_pass(fit)) counts <- two_pass_usage(fit, counts)
+  if (!is.null(fit$effects)) counts <- absorbed_usage(fit, counts)
   counts$n_periods <- sum(counts$status %in% c("estimated", "pooled"))
   counts
 }

@@ -63,8 +63,9 @@ print.lb_pooled <- function(x, ...) {
   cat_lines(
     "",
     label_line("Errors", paste0(x$covariance$phrase, "; ", reference_phrase(x$covariance))),
+    absorbed_line(x),
     sample_lines(x, usage$n_periods, unit),
-    label_line("Fit", paste0("R2 ", format(x$r_squared, digits = 3)))
+    label_line("Fit", paste0("R2 ", if (!is.null(x$effects)) "within the effects ", format(x$r_squared, digits = 3)))
   )
   invisible(x)
 }

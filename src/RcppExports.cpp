@@ -11,6 +11,22 @@ Rcpp::Rostream<true>&  Rcpp::Rcout = Rcpp::Rcpp_cout_get();
 Rcpp::Rostream<false>& Rcpp::Rcerr = Rcpp::Rcpp_cerr_get();
 #endif
 
+// cpp_absorb
+SEXP cpp_absorb(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, const Rcpp::List& codes, const Rcpp::NumericVector& n_codes, bool drop_singletons, int threads);
+RcppExport SEXP _lambdabar_cpp_absorb(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP codesSEXP, SEXP n_codesSEXP, SEXP drop_singletonsSEXP, SEXP threadsSEXP) {
+BEGIN_RCPP
+    Rcpp::RObject rcpp_result_gen;
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type design(designSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type period(periodSEXP);
+    Rcpp::traits::input_parameter< int >::type n_periods(n_periodsSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::List& >::type codes(codesSEXP);
+    Rcpp::traits::input_parameter< const Rcpp::NumericVector& >::type n_codes(n_codesSEXP);
+    Rcpp::traits::input_parameter< bool >::type drop_singletons(drop_singletonsSEXP);
+    Rcpp::traits::input_parameter< int >::type threads(threadsSEXP);
+    rcpp_result_gen = Rcpp::wrap(cpp_absorb(design, period, n_periods, codes, n_codes, drop_singletons, threads));
+    return rcpp_result_gen;
+END_RCPP
+}
 // cpp_corrected_sections
 SEXP cpp_corrected_sections(const Rcpp::List& design, const Rcpp::IntegerVector& period, int n_periods, int n_factors, const Rcpp::NumericMatrix& covariance, double min_assets, int threads);
 RcppExport SEXP _lambdabar_cpp_corrected_sections(SEXP designSEXP, SEXP periodSEXP, SEXP n_periodsSEXP, SEXP n_factorsSEXP, SEXP covarianceSEXP, SEXP min_assetsSEXP, SEXP threadsSEXP) {
@@ -710,6 +726,7 @@ END_RCPP
 }
 
 static const R_CallMethodDef CallEntries[] = {
+    {"_lambdabar_cpp_absorb", (DL_FUNC) &_lambdabar_cpp_absorb, 7},
     {"_lambdabar_cpp_corrected_sections", (DL_FUNC) &_lambdabar_cpp_corrected_sections, 7},
     {"_lambdabar_cpp_pooled_corrected", (DL_FUNC) &_lambdabar_cpp_pooled_corrected, 9},
     {"_lambdabar_cpp_instrument_sections", (DL_FUNC) &_lambdabar_cpp_instrument_sections, 7},
