@@ -160,7 +160,7 @@ print.lb_test <- function(x, ...) {
   invisible(x)
 }
 
-format_df <- function(df) vapply(df, function(d) format(d, digits = 4), "")
+format_df <- function(df) vapply(df, function(d) format(d, digits = 4, big.mark = ","), "")
 
 #' @export
 tidy.lb_test <- function(x, ...) {
