@@ -13,7 +13,7 @@ test_that("general covariance packages give on a pooled fit what they give on lm
     rows$use <- if (is.null(weights)) 1 else rows$w
     good <- rows[complete.cases(rows) & rows$use > 0, ]
     model <- lm(ret ~ size * value + industry, good, weights = use)
-    fit <- pooled(small_panel(rows), ret ~ size * value + industry, weights = weights)
+    fit <- pooled(small_panel(rows), ret ~ size * value + industry, weights = weights, errors = err_hetero())
     expect_equal(unname(model.matrix(fit)), unname(model.matrix(model)), ignore_attr = TRUE)
     expect_equal(unname(hatvalues(fit)), unname(hatvalues(model)), tolerance = 1e-9)
     expect_identical(df.residual(fit), as.numeric(df.residual(model)))
@@ -31,7 +31,7 @@ test_that("new rows are predicted as lm() predicts them", {
   rows <- small_rows()
   model <- lm(ret ~ size + log(size) + industry, rows)
   new <- data.frame(size = c(4, 5, NA), industry = c("nets", "salt", "glass"))
-  fit <- pooled(small_panel(rows), ret ~ size + log(size) + industry)
+  fit <- pooled(small_panel(rows), ret ~ size + log(size) + industry, errors = err_hetero())
   expect_equal(predict(fit, new), unname(predict(model, new)), tolerance = 1e-8)
   expect_equal(predict(fit), unname(fitted(model)), tolerance = 1e-9)
   averaged <- price_traits(small_panel(rows), ret ~ size + value)
@@ -45,7 +45,7 @@ test_that("with absorbed effects only what is exact is offered", {
   rows <- small_rows()
   rows <- rows[complete.cases(rows), ]
   model <- lm(ret ~ size + value + factor(firm), rows)
-  fit <- pooled(small_panel(rows), ret ~ size + value, absorb = "firm", singletons = "keep")
+  fit <- pooled(small_panel(rows), ret ~ size + value, absorb = "firm", singletons = "keep", errors = err_hetero())
   slopes <- c("size", "value")
   expect_equal(sandwich::vcovHC(fit, "HC0"), sandwich::vcovHC(model, "HC0")[slopes, slopes], tolerance = 1e-8)
   expect_identical(df.residual(fit), as.numeric(df.residual(model)))
