@@ -41,7 +41,8 @@
 #' @examples
 #' set.seed(1)
 #' f <- matrix(rnorm(360, 0.004, 0.04), 120, dimnames = list(NULL, c("mkt", "smb", "hml")))
-#' panel <- asset_panel(stack_returns(f %*% matrix(1, 3, 4) + rnorm(480, 0, 0.03), f), "asset", "period")
+#' returns <- f %*% matrix(1, 3, 4) + rnorm(480, 0, 0.03)
+#' panel <- asset_panel(stack_returns(returns, f), "asset", "period")
 #' sharpe_test(panel, ~ mkt + smb, list(~ mkt, ~ mkt + hml))
 #' @export
 sharpe_test <- function(panel, model, rivals, series = err_iid(), draws = 20000) {

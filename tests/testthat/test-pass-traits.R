@@ -89,7 +89,6 @@ test_that("too little data, negative weights and odd arguments are errors", {
   expect_error(price_traits(rows, ret ~ size), class = "lambdabar_error_input")
   expect_error(price_traits(small_panel(), ret ~ size, average = "median"), class = "lambdabar_error_input")
   expect_error(price_traits(small_panel(), ret ~ size, errors = "hac"), class = "lambdabar_error_input")
-  expect_error(price_traits(small_panel(), ret ~ size, errors = err_cluster("firm")), class = "lambdabar_error_unsupported")
   expect_error(price_traits(small_panel(), ret ~ size, errors = err_eiv()), class = "lambdabar_error_unsupported")
   expect_error(price_traits(small_panel(), ret ~ size, errors = err_hetero()), class = "lambdabar_error_unsupported")
 })
