@@ -4,7 +4,7 @@
 #' on the same regression by [stats::lm()]. They make a matrix of all rows: for panels of a size
 #' that can afford it. The package's own errors never do.
 #'
-#' @param object,x From [pooled()].
+#' @param object From [pooled()]; for `predict()` also from [price_traits()].
 #' @param newdata A data frame with the variables of the formula's right side, or missing for the
 #'   rows of the panel.
 #' @param ... Not used.
