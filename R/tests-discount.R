@@ -67,7 +67,7 @@ discount_factor <- function(fit, returns = "excess", series = err_iid()) {
     term = c(if (gross) "(Intercept)", factors), estimate = b, std.error = std_error,
     statistic = b / std_error, p.value = 2 * stats::pnorm(-abs(b / std_error)),
     usual.std.error = error_of(result$usual_rows),
-    premium = if (gross) NA_real_ else as.numeric(factor_covariance(fit) %*% b)
+    premium = if (gross) NA_real_ else as.numeric(result$premium)
   )
   right <- result$right
   attr(out, "distance") <- tibble::tibble(
@@ -78,12 +78,6 @@ discount_factor <- function(fit, returns = "excess", series = err_iid()) {
   attr(out, "title") <- paste0("Discount factor, ", returns, " returns: ", deparse1(fit$formula))
   attr(out, "series") <- series
   structure(out, class = c("lb_discount", class(out)))
-}
-
-# Divisor T.
-factor_covariance <- function(fit) {
-  factors <- fit$input$factors
-  crossprod(sweep(factors, 2L, colMeans(factors))) / nrow(factors)
 }
 
 #' @export

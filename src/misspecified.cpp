@@ -79,6 +79,7 @@ SEXP cpp_discount_factor(const Rcpp::List& input,
                                               series_options(series),
                                               as_indices(slot));
     return Rcpp::List::create(Rcpp::_["b"] = m.b,
+                              Rcpp::_["premium"] = m.premium,
                               Rcpp::_["rows"] = m.rows,
                               Rcpp::_["usual_rows"] = m.usual_rows,
                               Rcpp::_["distance2"] = m.distance2,

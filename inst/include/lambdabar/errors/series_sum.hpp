@@ -171,6 +171,21 @@ inline SeriesSum sum_series_by(const Matrix& rows,
   return result;
 }
 
+// A data-driven rule sees all columns alike, each at unit norm. `back` (N x P) returns rows
+// that were taken to a basis to the columns that they came from: the lags do not depend on the
+// basis then. Empty: the rows as they are.
+inline SeriesSum sum_alike(const Matrix& rows,
+                           const Matrix& back,
+                           const std::vector<Index>& slot,
+                           const SeriesOptions& options) {
+  const Matrix seen = back.size() > 0 ? Matrix(rows * back.transpose()) : rows;
+  const Vector inverse = usable_scale(seen.colwise().norm()).cwiseInverse();
+  const Matrix rule_map = back.size() > 0
+                              ? Matrix(back.transpose() * inverse.asDiagonal())
+                              : Matrix(inverse.asDiagonal());
+  return sum_series_by(rows, slot, rule_map, Vector::Ones(rule_map.cols()), options);
+}
+
 }  // namespace detail
 
 // slot empty: consecutive periods. bandwidth_weights: P, read by data-driven rules only.

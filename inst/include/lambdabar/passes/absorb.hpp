@@ -72,6 +72,7 @@ class GroupMeans {
   }
 
   const std::vector<int>& codes() const { return codes_; }
+  int n_codes() const { return static_cast<int>(total_.size()); }
   Index n_present() const {
     return std::count_if(total_.begin(), total_.end(), [](double w) { return w > 0.0; });
   }
@@ -95,10 +96,7 @@ class GroupMeans {
 
 // Connected components of the groups of two dimensions, joined by the rows.
 inline Index count_components(const GroupMeans& a, const GroupMeans& b) {
-  const int n_a =
-      a.codes().empty() ? 0 : *std::max_element(a.codes().begin(), a.codes().end()) + 1;
-  const int n_b =
-      b.codes().empty() ? 0 : *std::max_element(b.codes().begin(), b.codes().end()) + 1;
+  const int n_a = a.n_codes(), n_b = b.n_codes();
   std::vector<int> parent(static_cast<std::size_t>(n_a + n_b));
   std::iota(parent.begin(), parent.end(), 0);
   auto root = [&](int g) {
@@ -129,12 +127,15 @@ class Absorber {
   // x: a column of the used rows, replaced by what the effects leave. Tasks must not throw:
   // whether that was done is certified().
   void absorb(Vector& x) {
-    x.array() -= dot(x, Vector::Ones(x.size())) /
-                 std::accumulate(weight_.begin(), weight_.end(), 0.0);
+    double sum = 0, total = 0;
+    for (std::size_t i = 0; i < weight_.size(); ++i) {
+      sum += weight_[i] * x(static_cast<Index>(i));
+      total += weight_[i];
+    }
+    x.array() -= sum / total;
     before_ = std::sqrt(dot(x, x));
     if (!(before_ > 0.0)) return;
-    const double spread =
-        before_ / std::sqrt(std::accumulate(weight_.begin(), weight_.end(), 0.0));
+    const double spread = before_ / std::sqrt(total);
     if (groups_.size() == 1) {
       // Twice: the second pass takes out what rounding left.
       groups_[0].subtract(x, weight_, sums_);

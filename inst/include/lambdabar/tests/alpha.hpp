@@ -71,9 +71,7 @@ class PricingErrorTests {
  private:
   // The averaged errors are M C times the projected ones.
   TestedSeries tested(const Matrix& rows) const {
-    const Matrix back = C_ - fit_.X * (fit_.A * C_);
-    const Vector spread = usable_scale((rows * back.transpose()).colwise().norm());
-    return {rows, error_, back.transpose() * spread.cwiseInverse().asDiagonal()};
+    return {rows, error_, C_ - fit_.X * (fit_.A * C_)};
   }
 
   void corrected(AlphaTest& test) const {

@@ -25,6 +25,7 @@ namespace lambdabar {
 
 struct DiscountFactor {
   Vector b;
+  Vector premium;           // Cov(f) b, excess returns only
   Matrix rows, usual_rows;  // T x size of b, summing: any model; only a right one
   double distance2 = kNaN;
   Vector distance_rows;  // T, of delta^2
@@ -82,6 +83,7 @@ inline DiscountFactor discount_factor(const Eigen::Ref<const Matrix>& returns,
   const Matrix p = FR.transpose() * FC;
   const Vector u = FR.transpose() * Fe;
   const Vector xb = X * out.b;
+  if (!gross) out.premium = X.transpose() * xb / n;
   const Vector weight = gross ? Vector(-xb) : Vector(1.0 - xb.array());
   Matrix rows = weight.asDiagonal() * p;
   rows.rowwise() -= rows.colwise().mean().eval();
@@ -96,11 +98,7 @@ inline DiscountFactor discount_factor(const Eigen::Ref<const Matrix>& returns,
     Matrix tested = weight.asDiagonal() * (FR.transpose() * complement);
     tested.rowwise() -= tested.colwise().mean().eval();
     tested /= n;
-    const Vector spread =
-        detail::usable_scale((tested * complement.transpose()).colwise().norm());
-    const Matrix rule_map = complement.transpose() * spread.cwiseInverse().asDiagonal();
-    const Matrix S =
-        detail::sum_series_by(tested, slot, rule_map, Vector::Ones(N), series).S;
+    const Matrix S = detail::sum_alike(tested, complement, slot, series).S;
     out.right.statistic = n * out.distance2;
     out.right.weights = detail::positive_eigenvalues(n * S);
   }

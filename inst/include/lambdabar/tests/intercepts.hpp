@@ -63,11 +63,11 @@ inline void finish(const QuadraticForm& form, const TestSizes& sizes, AlphaTest&
   if (form.refusal != Refusal::none) refuse(test, form.refusal, sizes);
 }
 
-// Rows of the tested errors, their mean and the map to the errors that a lag rule sees.
+// Rows of the tested errors, their mean and the way back to the errors that a lag rule sees.
 struct TestedSeries {
   Matrix rows;
   Vector error;
-  Matrix rule_map;
+  Matrix back;
 };
 
 inline void series_test(const TestedSeries& tested,
@@ -75,8 +75,7 @@ inline void series_test(const TestedSeries& tested,
                         const std::vector<Index>& slot,
                         const TestSizes& sizes,
                         AlphaTest& test) {
-  const SeriesSum sum = sum_series_by(
-      tested.rows, slot, tested.rule_map, Vector::Ones(tested.rule_map.cols()), series);
+  const SeriesSum sum = sum_alike(tested.rows, tested.back, slot, series);
   test.lags = sum.lags;
   test.capped = sum.capped;
   test.negative_s0 = sum.negative_s0;
@@ -133,9 +132,7 @@ class InterceptTests {
       return refuse(test, Refusal::too_few_periods, sizes_);
     const Vector factor = 1.0 / sizes_.periods() - (deviations_ * tilt_).array();
     const Matrix rows = factor.asDiagonal() * residuals_;
-    const Vector spread = usable_scale(rows.colwise().norm());
-    series_test(
-        {rows, alpha_, spread.cwiseInverse().asDiagonal()}, series, slot, sizes_, test);
+    series_test({rows, alpha_, Matrix()}, series, slot, sizes_, test);
   }
 
   const Matrix& residuals_;

@@ -172,10 +172,7 @@ class AngleStatistic {
     const Vector a = c * x_.mean - s * unit_ * x_.beta.col(0);
     const Matrix rows =
         (c * (expected_ ? deviations_ : x_.residuals) - s * tilted_) / x_.periods();
-    const Vector spread = usable_scale(rows.colwise().norm());
-    const Matrix rule_map = Matrix(spread.cwiseInverse().asDiagonal());
-    const Matrix S =
-        sum_series_by(rows, slot_, rule_map, Vector::Ones(rows.cols()), series_).S;
+    const Matrix S = sum_alike(rows, Matrix(), slot_, series_).S;
     const QuadraticForm form = quadratic_form(a, S);
     if (form.refusal != Refusal::none)
       throw Error("rank", "The covariance of the pricing errors is singular.");

@@ -111,11 +111,7 @@ inline PricingR2 pricing_r2(const TwoPassData& data,
     const Matrix complement = detail::complement(FX);
     const Matrix rows = (y / n).asDiagonal() *
                         (whitening.apply(residuals.transpose()).transpose() * complement);
-    const Vector spread =
-        detail::usable_scale((rows * complement.transpose()).colwise().norm());
-    const Matrix rule_map = complement.transpose() * spread.cwiseInverse().asDiagonal();
-    const Matrix S =
-        detail::sum_series_by(rows, slot, rule_map, Vector::Ones(N), series).S;
+    const Matrix S = detail::sum_alike(rows, complement, slot, series).S;
     out.one.statistic = n * out.Q;
     out.one.weights = detail::positive_eigenvalues(n * S);
   }

@@ -40,9 +40,7 @@ inline QuadraticForm robust_rank(const Loadings& x,
   Matrix h(x.T, rows * columns);
   for (Index j = 0; j < columns; ++j)
     h.middleCols(j * rows, rows) = f.col(j).asDiagonal() * e;
-  const Vector spread = usable_scale(h.colwise().norm());
-  const Matrix rule_map = Matrix(spread.cwiseInverse().asDiagonal());
-  const Matrix S = sum_series_by(h, slot, rule_map, Vector::Ones(h.cols()), series).S;
+  const Matrix S = sum_alike(h, Matrix(), slot, series).S;
   return quadratic_form(Eigen::Map<const Vector>(middle.data(), middle.size()), S);
 }
 

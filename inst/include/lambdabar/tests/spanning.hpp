@@ -89,10 +89,8 @@ inline SpanningTests spanning_tests(const Eigen::Ref<const Matrix>& returns,
     out.wald_refusal = Refusal::too_few_periods;
     return out;
   }
-  const Vector spread = detail::usable_scale(rows.colwise().norm());
-  const Matrix rule_map = Matrix(spread.cwiseInverse().asDiagonal());
-  const auto form = detail::quadratic_form(
-      h, detail::sum_series_by(rows, slot, rule_map, Vector::Ones(2 * N), series).S);
+  const auto form =
+      detail::quadratic_form(h, detail::sum_alike(rows, Matrix(), slot, series).S);
   out.wald = form.value;
   out.wald_refusal = form.refusal;
   return out;
