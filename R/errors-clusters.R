@@ -1,5 +1,5 @@
-# Clustered errors of pooled fits and of averages, and common shocks: cluster ids from column names, what the core refuses, and
-# what a reader should know of the result.
+# Clustered errors of pooled fits and of averages, few clusters, common shocks: cluster ids from
+# column names, what the core refuses, and what a reader should know of the result.
 
 #' @exportS3Method
 error_covariance.lb_err_cluster <- function(errors, fit, call = rlang::caller_env()) {
@@ -82,15 +82,14 @@ error_covariance.lb_err_wild <- function(errors, fit, call = rlang::caller_env()
   out <- error_covariance(err_cluster(errors$way), fit, call)
   G <- ncol(moments$s)
   complete <- errors$draws == "rademacher" && 2^G <= errors$reps
-  stats::runif(1)
-  out$reference <- list(
+  if (!complete) stats::runif(1)
+  reference <- list(
     kind = "wild", moments = moments, complete = complete, restricted = errors$null, draws = errors$draws,
     reps = if (complete) 2^G else errors$reps, kept = !fit$core$aliased, theta = unname(fit$estimate),
-    seed = get(".Random.seed", envir = globalenv())
+    seed = if (!complete) get(".Random.seed", envir = globalenv())
   )
-  # The generator moves on as if the draws had been kept.
-  wild_signs(out$reference)
-  out$reference$at <- wild_answer(out$reference, 0.95)
+  reference$at <- wild_limits(reference, wild_signs(reference), 0.95)
+  out$reference <- reference
   out$phrase <- paste0(
     "wild bootstrap of ", format_count(G), " clusters of ", errors$way, ", ",
     if (complete) paste0("all ", format_count(2^G), " sign vectors") else paste0(format_count(errors$reps), " draws (", errors$draws, ")"),
@@ -109,14 +108,21 @@ wild_signs <- function(reference) {
   matrix(sample(as.vector(values), G * reference$reps, replace = TRUE), G)
 }
 
-# p-values of zero and limits, with the draws that belong to the fit.
-wild_answer <- function(reference, level) {
-  now <- get(".Random.seed", envir = globalenv())
-  on.exit(assign(".Random.seed", now, envir = globalenv()))
-  assign(".Random.seed", reference$seed, envir = globalenv())
+# The draws that belong to a fit, made again: they would take more room than the fit itself.
+wild_signs_again <- function(reference) {
+  if (!reference$complete) {
+    now <- get0(".Random.seed", envir = globalenv())
+    on.exit(if (is.null(now)) rm(".Random.seed", envir = globalenv()) else assign(".Random.seed", now, envir = globalenv()))
+    assign(".Random.seed", reference$seed, envir = globalenv())
+  }
+  wild_signs(reference)
+}
+
+# p-values of zero, and limits.
+wild_limits <- function(reference, signs, level) {
   kept <- reference$kept
   found <- core_result(cpp_wild(
-    reference$moments, reference$theta[kept], wild_signs(reference), reference$complete, reference$restricted, level
+    reference$moments, reference$theta[kept], signs, reference$complete, reference$restricted, level
   ))
   lapply(found, function(value) {
     out <- rep(NA_real_, length(kept))
@@ -138,8 +144,7 @@ period_weights <- function(fit, call) {
 #' @exportS3Method
 error_covariance.lb_err_common <- function(errors, fit, call = rlang::caller_env()) {
   if (!inherits(fit, "lb_pooled")) {
-    refuse_amplified(errors, fit, call)
-    return(series_covariance(errors, fit$rows, fit$slot, fit))
+    return(sum_over_periods(errors, fit, call))
   }
   scores <- row_result(
     cpp_period_scores(estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, thread_count()), fit$panel, call = call

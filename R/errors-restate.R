@@ -70,7 +70,7 @@ is_two_pass <- function(fit) inherits(fit, "lb_premia") && fit$kind == "factors"
 error_covariance.lb_err_iid <- function(errors, fit, call = rlang::caller_env()) {
   if (inherits(fit, "lb_pooled")) {
     return(list(
-      vcov = fit$sigma2 * fit$bread, df = fit$n_used - fit$rank - (if (is.null(fit$effects)) 0 else fit$effects$rank),
+      vcov = fit$sigma2 * fit$bread, df = df.residual(fit),
       phrase = "independent rows of equal variance"
     ))
   }
@@ -78,30 +78,23 @@ error_covariance.lb_err_iid <- function(errors, fit, call = rlang::caller_env())
   series_covariance(errors, fit$rows, fit$slot, fit)
 }
 
-#' @exportS3Method
-error_covariance.lb_err_hac <- function(errors, fit, call = rlang::caller_env()) {
+# Sums over periods other than the plain one: for averaged premia alone.
+sum_over_periods <- function(errors, fit, call = rlang::caller_env()) {
   if (inherits(fit, "lb_pooled")) {
-    refuse_errors(errors, fit, "Rows of a panel are no time series: use {.code err_cluster(\"asset\", \"period\")}.", call)
-  }
-  refuse_amplified(errors, fit, call)
-  series_covariance(errors, fit$rows, fit$slot, fit)
-}
-
-# Sums that are no kernel of lags: for averaged premia alone.
-resummed_premia <- function(errors, fit, call = rlang::caller_env()) {
-  if (inherits(fit, "lb_pooled")) {
-    refuse_errors(errors, fit, "Rows of a panel are no time series: use {.code err_cluster(\"asset\", \"period\")}.", call)
+    refuse_errors(errors, fit, "Rows of a panel are no time series: use {.code err_cluster(\"asset\", \"period\")} or {.fn err_common}.", call)
   }
   refuse_amplified(errors, fit, call)
   series_covariance(errors, fit$rows, fit$slot, fit)
 }
 
 #' @exportS3Method
-error_covariance.lb_err_cosine <- resummed_premia
+error_covariance.lb_err_hac <- sum_over_periods
 #' @exportS3Method
-error_covariance.lb_err_groups <- resummed_premia
+error_covariance.lb_err_cosine <- sum_over_periods
 #' @exportS3Method
-error_covariance.lb_err_block <- resummed_premia
+error_covariance.lb_err_groups <- sum_over_periods
+#' @exportS3Method
+error_covariance.lb_err_block <- sum_over_periods
 
 #' @exportS3Method
 error_covariance.lb_err_eiv <- function(errors, fit, call = rlang::caller_env()) {
@@ -225,7 +218,7 @@ error_covariance.lb_err_hetero <- function(errors, fit, call = rlang::caller_env
     cpp_heteroskedastic(estimation_design(fit), fit$panel$period, length(fit$panel$periods), fit$core, type, thread_count()),
     fit$panel, call = call
   )
-  df <- fit$n_used - fit$rank - (if (is.null(fit$effects)) 0 else fit$effects$rank)
+  df <- df.residual(fit)
   if (type == 1L) vcov <- vcov * (fit$n_used - fit$rank) / df
   list(
     vcov = expand_aliased(vcov, fit$core$aliased), df = df,

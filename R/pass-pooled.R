@@ -112,17 +112,17 @@ fit_absorbed <- function(panel, design, absorb, weights, drop, call = rlang::cal
   inner$intercept <- FALSE
   inner$terms <- setdiff(design$terms, "(Intercept)")
   fit <- fit_pooled(panel, inner, weights, call)
-  if (fit$n_used - fit$rank - found$rank < 1) {
-    abort_sample("No residual degree of freedom is left: {fit$n_used} rows, {fit$rank} terms, effects of rank {found$rank}.", call = call)
-  }
   fit$estimation <- inner
   fit$design <- design
   fit$effects <- list(
     names = absorb, codes = codes, levels = found$levels, rank = found$rank, exact = found$exact_rank,
     n_singletons = found$n_singletons, steps = found$steps, worst = found$worst
   )
+  if (df.residual(fit) < 1) {
+    abort_sample("No residual degree of freedom is left: {fit$n_used} rows, {fit$rank} terms, effects of rank {found$rank}.", call = call)
+  }
   # Degrees of freedom of independent rows count the dummies.
-  fit$sigma2 <- fit$sigma2 * (fit$n_used - fit$rank) / (fit$n_used - fit$rank - found$rank)
+  fit$sigma2 <- fit$sigma2 * (fit$n_used - fit$rank) / df.residual(fit)
   fit
 }
 

@@ -2,7 +2,7 @@
 # Vogelsang 2005, Econometric Theory 21, 1130-1164): W(1) / sqrt(Q(b)), with V the bridge of the
 # Wiener process W, Q(b) = (2/b) (int V(r)^2 dr - int_0^(1-b) V(r) V(r+b) dr).
 #   Rscript tools/bench/fixed-b.R [runs]
-# Prints the table of R/errors-fixed-b.R.
+# Prints the table of R/errors-reference.R.
 
 arguments <- commandArgs(trailingOnly = TRUE)
 runs <- if (length(arguments)) as.integer(arguments[1L]) else 400000L
