@@ -335,6 +335,9 @@ err_common <- function(lags = "rule", kernel = "bartlett", adjust = TRUE) {
 
 # `resummed`: whether sums that are no kernel of lags will do.
 check_series <- function(series, resummed = FALSE, call = rlang::caller_env()) {
+  if (!resummed && identical(series$critical, "fixed_b")) {
+    abort_input("Fixed-b critical values are for t-statistics of premia: here give {.arg series} without {.arg critical}.", call = call)
+  }
   if (inherits(series, c("lb_err_iid", "lb_err_hac")) || resummed && is_resummed(series)) {
     return(series)
   }

@@ -32,7 +32,7 @@
 #'   complement of the betas, of known rank, in place of a generalised inverse.
 #'
 #' @return A tibble of class `lb_test` with one row a kind: `test`, `statistic`, `num.df`,
-#'   `den.df` (`Inf` for chi-square), `p.value`, `note`. A test that the sample cannot carry
+#'   `den.df` (`Inf` for chi-square, `NA` for weighted ones), `p.value`, `note`. A test that the sample cannot carry
 #'   has `NA` and its reason in `note`.
 #'
 #' @section Errors:
@@ -155,7 +155,7 @@ efficient_row <- function(fit, series, call) {
 just_identified_note <- "as many premia as assets: there is no pricing error to test"
 
 distance_row <- function(fit, kind, series, call) {
-  empty <- list(statistic = NA_real_, num.df = NA_real_, den.df = Inf, p.value = NA_real_)
+  empty <- list(statistic = NA_real_, num.df = NA_real_, den.df = NA_real_, p.value = NA_real_)
   gross <- kind == "hj_gross"
   if (gross) check_gross(fit, call)
   result <- cpp_discount_factor(fit$input, gross, series_options(series), fit$slot_estimated - 1L)
@@ -166,7 +166,7 @@ distance_row <- function(fit, kind, series, call) {
     return(c(empty, note = "as many coefficients as assets: the distance is zero"))
   }
   list(
-    statistic = result$right$statistic, num.df = length(result$right$weights), den.df = Inf,
+    statistic = result$right$statistic, num.df = length(result$right$weights), den.df = NA_real_,
     p.value = result$right$p,
     note = paste0(
       "distance ", formatC(sqrt(result$distance2), digits = 3, format = "f"), " (error ",

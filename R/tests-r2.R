@@ -66,10 +66,12 @@ pricing_r2 <- function(fit, series = err_iid(), rival = NULL, level = 0.95) {
     others <- lapply(measures, r2_of, fit = rival, series = series)
     rows <- c(rows, Map(difference_row, measures, found, others, MoreArgs = list(fit, rival, series, level)))
   }
-  new_r2(
-    vctrs::vec_rbind(!!!rows), series = series, level = level,
+  out <- vctrs::vec_rbind(!!!rows)
+  structure(
+    out, series = series, level = level,
     title = paste0("Cross-sectional R2, ", count_of(length(fit$alpha), "asset"), ", ", count_of(length(fit$kept), period_noun(fit$panel))),
-    formulas = c(deparse1(fit$formula), if (!is.null(rival)) paste("against", deparse1(rival$formula)))
+    formulas = c(deparse1(fit$formula), if (!is.null(rival)) paste("against", deparse1(rival$formula))),
+    class = c("lb_r2", class(out))
   )
 }
 
@@ -125,7 +127,6 @@ difference_row <- function(measure, a, b, fit, rival, series, level) {
     return(row)
   }
   slot <- fit$slot_estimated - 1L
-  sum_of <- function(value, rows) core_result(cpp_joint_zero(value, rows, series_options(series), slot))
   factors <- list(a = colnames(fit$first$beta), b = colnames(rival$first$beta))
   only <- list(a = !factors$a %in% factors$b, b = !factors$b %in% factors$a)
   df <- sum(only$a) + sum(only$b)
@@ -133,7 +134,9 @@ difference_row <- function(measure, a, b, fit, rival, series, level) {
     row$note <- "the two models are the same"
     return(row)
   }
-  wald <- sum_of(c(a$b[only$a], b$b[only$b]), cbind(a$b_rows[, only$a], b$b_rows[, only$b]))
+  wald <- core_result(cpp_joint_zero(
+    c(a$b[only$a], b$b[only$b]), cbind(a$b_rows[, only$a], b$b_rows[, only$b]), series_options(series), slot
+  ))
   p_worthless <- stats::pchisq(wald, df, lower.tail = FALSE)
   if (!any(only$a) || !any(only$b)) {
     row$p_zero <- p_worthless
@@ -156,10 +159,6 @@ difference_row <- function(measure, a, b, fit, rival, series, level) {
     row$note <- paste0("neither model taken as right (own factors worth nothing: p = ", format_p(p_worthless), ")")
   }
   row
-}
-
-new_r2 <- function(rows, ...) {
-  structure(rows, ..., class = c("lb_r2", class(rows)))
 }
 
 #' @export

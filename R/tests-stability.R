@@ -17,8 +17,8 @@
 #' @details
 #' The statistic of equal parts is the Wald statistic of parts taken as independent, against
 #' chi-square. The break statistic is the largest Wald statistic of two different means; its p-value
-#' is DeLong's (1981) expansion of the limit for large values, as in Estrella (2003), good below about
-#' 0.2; larger ones are rough, and none is above 0.6. A break that a reader has pointed out beforehand needs no such test, and a
+#' is DeLong's (1981) expansion of the limit for large values, as in Estrella (2003): right to
+#' simulation error at 5 % and below, a tenth of itself too small near 15 %; none is above 0.6. A break that a reader has pointed out beforehand needs no such test, and a
 #' p-value below 0.05 is no proof of *one* break: a slow drift is found as well.
 #'
 #' @return

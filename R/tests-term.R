@@ -147,7 +147,7 @@ print.lb_test <- function(x, ...) {
     test = x$test,
     statistic = formatC(x$statistic, digits = 3, format = "f"),
     df = ifelse(
-      is.na(x$num.df), "", ifelse(is.finite(x$den.df), paste0("F(", x$num.df, ", ", format_df(x$den.df), ")"), paste0("chi2(", x$num.df, ")"))
+      is.na(x$num.df) | is.na(x$den.df), "", ifelse(is.finite(x$den.df), paste0("F(", x$num.df, ", ", format_df(x$den.df), ")"), paste0("chi2(", x$num.df, ")"))
     ),
     p = format_p(x$p.value)
   )

@@ -139,6 +139,11 @@ test_that("fixed-b critical values agree with an independent simulation and with
   expect_match(term_test(fit, "x1", "x2")$note, "single terms")
   expect_output(print(fit), "fixed-b critical values")
   expect_error(err_hac(kernel = "qs", critical = "fixed_b"), class = "lambdabar_error_input")
+  # Where no t-statistic uses them they are refused, not ignored.
+  expect_error(err_eiv("shanken", err_hac(critical = "fixed_b")), class = "lambdabar_error_input")
+  factors <- price_factors(factor_panel(), ret ~ f1)
+  expect_error(alpha_test(factors, series = err_hac(critical = "fixed_b")), class = "lambdabar_error_input")
+  expect_output(print(restate(factors, err_misspec(err_hac(critical = "fixed_b")))), "fixed-b critical values")
 })
 
 test_that("new sums work on rows of estimated betas and in the ladder, not where they cannot", {
