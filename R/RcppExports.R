@@ -181,8 +181,8 @@ cpp_scan_breaks <- function(series, trim, options, slot) {
     .Call(`_lambdabar_cpp_scan_breaks`, series, trim, options, slot)
 }
 
-cpp_latent <- function(returns, observed, counts, rule, most, intercept, series, slot) {
-    .Call(`_lambdabar_cpp_latent`, returns, observed, counts, rule, most, intercept, series, slot)
+cpp_latent <- function(returns, observed, counts, rule, most, intercept) {
+    .Call(`_lambdabar_cpp_latent`, returns, observed, counts, rule, most, intercept)
 }
 
 cpp_squared_sharpe <- function(factors) {

@@ -95,7 +95,7 @@ price_latent <- function(panel, formula, n_latent = "penalised", intercept = FAL
 latent_core <- function(fit, counts, call = rlang::caller_env()) {
   core_result(cpp_latent(
     fit$data$returns, fit$data$factors, counts, if (fit$rule == "given") "penalised" else fit$rule,
-    fit$most, fit$intercept, series_options(err_iid()), fit$slot - 1L
+    fit$most, fit$intercept
   ), call)
 }
 

@@ -610,8 +610,8 @@ BEGIN_RCPP
 END_RCPP
 }
 // cpp_latent
-SEXP cpp_latent(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& observed, const Rcpp::IntegerVector& counts, const std::string& rule, int most, bool intercept, const Rcpp::List& series, const Rcpp::IntegerVector& slot);
-RcppExport SEXP _lambdabar_cpp_latent(SEXP returnsSEXP, SEXP observedSEXP, SEXP countsSEXP, SEXP ruleSEXP, SEXP mostSEXP, SEXP interceptSEXP, SEXP seriesSEXP, SEXP slotSEXP) {
+SEXP cpp_latent(const Rcpp::NumericMatrix& returns, const Rcpp::NumericMatrix& observed, const Rcpp::IntegerVector& counts, const std::string& rule, int most, bool intercept);
+RcppExport SEXP _lambdabar_cpp_latent(SEXP returnsSEXP, SEXP observedSEXP, SEXP countsSEXP, SEXP ruleSEXP, SEXP mostSEXP, SEXP interceptSEXP) {
 BEGIN_RCPP
     Rcpp::RObject rcpp_result_gen;
     Rcpp::traits::input_parameter< const Rcpp::NumericMatrix& >::type returns(returnsSEXP);
@@ -620,9 +620,7 @@ BEGIN_RCPP
     Rcpp::traits::input_parameter< const std::string& >::type rule(ruleSEXP);
     Rcpp::traits::input_parameter< int >::type most(mostSEXP);
     Rcpp::traits::input_parameter< bool >::type intercept(interceptSEXP);
-    Rcpp::traits::input_parameter< const Rcpp::List& >::type series(seriesSEXP);
-    Rcpp::traits::input_parameter< const Rcpp::IntegerVector& >::type slot(slotSEXP);
-    rcpp_result_gen = Rcpp::wrap(cpp_latent(returns, observed, counts, rule, most, intercept, series, slot));
+    rcpp_result_gen = Rcpp::wrap(cpp_latent(returns, observed, counts, rule, most, intercept));
     return rcpp_result_gen;
 END_RCPP
 }
@@ -771,7 +769,7 @@ static const R_CallMethodDef CallEntries[] = {
     {"_lambdabar_cpp_block_length", (DL_FUNC) &_lambdabar_cpp_block_length, 1},
     {"_lambdabar_cpp_resampled_t", (DL_FUNC) &_lambdabar_cpp_resampled_t, 4},
     {"_lambdabar_cpp_scan_breaks", (DL_FUNC) &_lambdabar_cpp_scan_breaks, 4},
-    {"_lambdabar_cpp_latent", (DL_FUNC) &_lambdabar_cpp_latent, 8},
+    {"_lambdabar_cpp_latent", (DL_FUNC) &_lambdabar_cpp_latent, 6},
     {"_lambdabar_cpp_squared_sharpe", (DL_FUNC) &_lambdabar_cpp_squared_sharpe, 1},
     {"_lambdabar_cpp_best_model", (DL_FUNC) &_lambdabar_cpp_best_model, 3},
     {"_lambdabar_cpp_grs", (DL_FUNC) &_lambdabar_cpp_grs, 2},

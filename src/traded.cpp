@@ -26,9 +26,7 @@ SEXP cpp_latent(const Rcpp::NumericMatrix& returns,
                 const Rcpp::IntegerVector& counts,
                 const std::string& rule,
                 int most,
-                bool intercept,
-                const Rcpp::List& series,
-                const Rcpp::IntegerVector& slot) {
+                bool intercept) {
   return guarded([&]() -> SEXP {
     int needed = most;
     for (int p : counts) needed = std::max(needed, p);
@@ -48,12 +46,10 @@ SEXP cpp_latent(const Rcpp::NumericMatrix& returns,
                                "The returns do not have so many components.",
                                {{"n_latent", static_cast<double>(p)},
                                 {"rank", static_cast<double>(basis.V.cols())}});
-      const auto fit = lambdabar::latent_fit(
-          basis, view(observed), p, intercept, series_options(series), as_indices(slot));
+      const auto fit = lambdabar::latent_fit(basis, view(observed), p, intercept);
       fits.push_back(Rcpp::List::create(Rcpp::_["p"] = p,
                                         Rcpp::_["premium"] = fit.premium,
                                         Rcpp::_["rows"] = fit.rows,
-                                        Rcpp::_["gamma"] = fit.gamma,
                                         Rcpp::_["strength"] = fit.strength,
                                         Rcpp::_["r_squared"] = fit.r_squared,
                                         Rcpp::_["mean_r2"] = fit.mean_r2));

@@ -25,7 +25,7 @@ TEST(Latent, BasisIsOrthonormalWhicheverSideIsShorter) {
 TEST(Latent, AFactorThatIsAComponentHasItsPremium) {
   const simulated::Panel p = simulated::panel(60, 20, 2, 15);
   const LatentBasis basis = latent_basis(p.returns, 4);
-  const LatentFit fit = latent_fit(basis, basis.V.leftCols(2), 3, true, {}, {});
+  const LatentFit fit = latent_fit(basis, basis.V.leftCols(2), 3, true);
   EXPECT_NEAR(fit.premium(0), fit.gamma(1), 1e-10);
   EXPECT_NEAR(fit.premium(1), fit.gamma(2), 1e-10);
   EXPECT_NEAR(fit.r_squared(0), 1.0, 1e-10);

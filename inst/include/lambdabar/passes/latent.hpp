@@ -114,9 +114,7 @@ inline Index count_factors(
 inline LatentFit latent_fit(const LatentBasis& basis,
                             const Eigen::Ref<const Matrix>& observed,
                             Index p,
-                            bool intercept,
-                            const SeriesOptions& series,
-                            const std::vector<Index>& slot) {
+                            bool intercept) {
   const Index T = basis.V.rows(), N = basis.beta.rows(), d = observed.cols();
   const double n = static_cast<double>(T);
   const Matrix V = basis.V.leftCols(p);
@@ -140,9 +138,7 @@ inline LatentFit latent_fit(const LatentBasis& basis,
   out.strength.resize(d);
   out.r_squared.resize(d);
   for (Index k = 0; k < d; ++k) {
-    const Matrix rows = rest.col(k).asDiagonal() * V / n;
-    const Matrix S =
-        detail::sum_series_by(rows, slot, Matrix(), Vector::Ones(p), series).S;
+    const Matrix S = outer_sum(rest.col(k).asDiagonal() * V / n);
     out.strength(k) = detail::quadratic_form(eta.row(k).transpose(), S).value;
     out.r_squared(k) = explained.col(k).squaredNorm() / G.col(k).squaredNorm();
   }
